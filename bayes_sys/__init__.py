@@ -1,0 +1,1 @@
+"""bayes-sys: joint regressions for several units with short series and shared shocks."""
