@@ -1,4 +1,4 @@
-"""What draws of one quantity come down to: moments, quantiles and convergence figures, ArviZ's where it has them."""
+"""What the draws of a quantity come down to: moments, quantiles and ArviZ's convergence figures."""
 
 from __future__ import annotations
 

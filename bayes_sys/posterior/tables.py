@@ -181,7 +181,8 @@ def fitted_table(posterior: xr.DataTree, system: System) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        ``period, equation, observed, mean, q5, q95, residual``, equation by equation, on the response's scale.
+        ``period, equation, observed, mean, q5, q95, residual``, equation by equation, on the scale
+        of the response.
     """
     import pandas as pd
 
@@ -272,7 +273,8 @@ def _empty_summary() -> Summary:
 
 
 def _n_observed(system: System) -> NDArray[np.int64]:
-    return np.isfinite(system.responses).sum(axis=0).astype(np.int64)
+    counts: NDArray[np.int64] = np.isfinite(system.responses).sum(axis=0).astype(np.int64)
+    return counts
 
 
 def _constant(posterior: xr.DataTree, name: str, system: System) -> Array:

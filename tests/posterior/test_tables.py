@@ -222,8 +222,7 @@ def test_explained_share_agrees_with_arviz(tree, system):
     beta = tree["posterior/coefficients"].values.reshape(1000, -1)[:, :2]
     scales = tree["posterior/scales"].values.reshape(1000, -1)[:, 0]
     ours = tables.explained_share(system.equations[0], beta, scales, np.ones(30, dtype=bool))
-    # ArviZ divides the variance of the fit by T, ours by T - 1 as the article does: make up for it in the scale
-    theirs = array_stats.bayesian_r2(beta @ system.equations[0].design.T, scales * np.sqrt(29 / 30))
+    theirs = array_stats.bayesian_r2(beta @ system.equations[0].design.T, scales)
     assert_allclose(ours, theirs, rtol=1e-10)
 
 
