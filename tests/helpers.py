@@ -24,8 +24,9 @@ def make_system(
 ) -> System:
     """Build a system from its arrays; periods are the whole numbers 1, 2, ..., T unless given.
 
-    ``designs[i]`` has shape (T, p_i) and holds the intercept's ones where there is one; ``responses`` has shape
-    (T, N). Unnamed equations are a, b, c, ...; an unnamed first column of ones is "intercept", others x1, x2, ...
+    ``designs[i]`` has shape (T, p_i) and holds the intercept's ones where there is one; ``responses`` has
+    shape (T, N). Unnamed equations are a, b, c, ...; an unnamed first column of ones is "intercept", others
+    are x1, x2, ...
     """
     designs = [np.asarray(design, dtype=float) for design in designs]
     responses = np.asarray(responses, dtype=float)
