@@ -1,8 +1,8 @@
 """Make the invented data of this case: ``losses.csv``, ``economy.csv`` and ``truth.json``.
 
-Run ``python case_studies/credit_segments/make_data.py [FOLDER]``; without a folder the files are written beside
-this script. The same files come out byte for byte each time: the economy is rounded as it is written before the
-losses are computed from it, so the truth holds exactly for the figures in the tables.
+Run ``python case_studies/credit_segments/make_data.py [FOLDER]``; without a folder the files go beside this
+script. The same files come out byte for byte each time: the economy is rounded as it is written before
+the losses are computed from it, so the truth holds exactly for the figures in the tables.
 """
 
 from __future__ import annotations
@@ -117,7 +117,8 @@ def main(folder: Path) -> None:
     economy = [[f"{v:.1f}" for v in unemployment], [f"{v:.2f}" for v in spread]]
     texts = {
         "losses.csv": table_text(
-            ["quarter", *(f"{s}_loss" for s in SEGMENTS)], [[f"{v:.3f}" for v in column] for column in losses.T]
+            ["quarter", *(f"{s}_loss" for s in SEGMENTS)],
+            [[f"{v:.3f}" for v in column] for column in losses.T],
         ),
         "economy.csv": table_text(["quarter", "unemployment", "rate_spread"], economy),
         "truth.json": truth_text(),

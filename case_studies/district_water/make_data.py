@@ -1,8 +1,8 @@
 """Make the invented data of this case: ``demand.csv`` and ``truth.json``.
 
-Run ``python case_studies/district_water/make_data.py [FOLDER]``; without a folder the files are written beside
-this script. The same files come out byte for byte each time: regressors are rounded as they are written before
-the demand is computed from them, so the truth holds exactly for the figures in the table.
+Run ``python case_studies/district_water/make_data.py [FOLDER]``; without a folder the files go beside this
+script. The same files come out byte for byte each time: regressors are rounded as they are written
+before the demand is computed from them, so the truth holds exactly for the figures in the table.
 """
 
 from __future__ import annotations
@@ -83,7 +83,11 @@ def make_demand(rng: np.random.Generator, tariff: Array, heat: Array, connection
     shocks = rng.standard_normal((len(YEARS), len(DISTRICTS))) @ root.T * SCALES
     intercept, on_tariff, on_heat, on_connections = COEFFICIENTS.T
     log_demand = (
-        intercept + on_tariff * np.log(tariff) + on_heat * heat + on_connections * np.log(connections) + shocks
+        intercept
+        + on_tariff * np.log(tariff)
+        + on_heat * heat
+        + on_connections * np.log(connections)
+        + shocks
     )
     return np.exp(log_demand)
 
