@@ -1,0 +1,64 @@
+"""How long, how carefully and with which seed to sample."""
+
+from __future__ import annotations
+
+import os
+from dataclasses import dataclass
+
+from bayes_sys.errors import InputError
+
+CAREFUL, ORDINARY = 0.95, 0.9
+
+
+@dataclass(frozen=True)
+class Settings:
+    """Settings of one sampling run.
+
+    Parameters
+    ----------
+    chains, warmup, draws : int
+        Number of chains, and iterations per chain before and after adaptation.
+    seed : int
+    target_accept : float or None
+        Aim of the step-size adaptation; None: 0.95 where no spread is learned, else 0.9, the values that
+        left no divergences on short series when they were measured.
+    cores : int or None
+        Chains run at once; None: as many as there are cores.
+    """
+
+    chains: int = 4
+    warmup: int = 1000
+    draws: int = 1000
+    seed: int = 1
+    target_accept: float | None = None
+    cores: int | None = None
+
+    def __post_init__(self) -> None:
+        """Refuse what no sampler can do."""
+        for name, least in (("chains", 1), ("warmup", 50), ("draws", 4)):
+            value = getattr(self, name)
+            if value < least:
+                raise InputError(
+                    f"{name} is {value}, expected at least {least}.", mend=f"Give {name} = {least} or more."
+                )
+        if not 0 <= self.seed < 2**63:
+            raise InputError(
+                f"seed is {self.seed}, expected a whole number from 0 to 2^63 - 1.", mend="Choose another seed."
+            )
+        if self.target_accept is not None and not 0.5 <= self.target_accept < 1:
+            raise InputError(
+                f"target_accept is {self.target_accept}, expected a number from 0.5 to below 1.",
+                mend="Leave it out to have it chosen.",
+            )
+
+    @property
+    def n_cores(self) -> int:
+        """Chains run at once."""
+        return min(self.chains, self.cores or _available())
+
+
+def _available() -> int:
+    """Cores this process may use (``os.process_cpu_count`` came with Python 3.13)."""
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
