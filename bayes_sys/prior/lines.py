@@ -135,7 +135,8 @@ def _lay(
             raise CardError(
                 f"“{key}” is not a key of the family “{family}”, which {label} has there.",
                 where=_place(card, path),
-                mend=f"Give the line a family of its own, or use: {', '.join(families[family].keys)}.",
+                mend=f"Give the line a family of its own, use the keys {', '.join(families[family].keys)}, or "
+                "speak of fewer coefficients.",
             )
     return family, {**values, **given}
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from bayes_sys.errors import NotBuiltError
+from bayes_sys.errors import CardError, NotBuiltError
 from bayes_sys.prior.cards import PriorCard
 from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
 from bayes_sys.prior.lines import Statement, coefficient_statements, scale_statements
@@ -43,6 +43,7 @@ def resolve(card: PriorCard, system: System) -> Prior:
     scales = scale_statements(card, system)
     _refuse_unbuilt(card, system, coefficients)
     if card.scaled:
+        _refuse_intercept_units(card, system, coefficients)
         units = equation_units(system)
         coefficients = _unscale_coefficients(coefficients, system, units)
         scales = tuple(_rescale(s, {_SIZE[s.family]: u.response}) for s, u in zip(scales, units, strict=True))
@@ -81,6 +82,17 @@ def _refuse_unbuilt(card: PriorCard, system: System, statements: tuple[Statement
                 f"The card gives “{label}” the family “student_t”, which is not built yet for coefficients.",
                 where=f"prior card “{card.name}”, [coefficients]",
                 mend="Use “normal” or “pooled”.",
+            )
+
+
+def _refuse_intercept_units(card: PriorCard, system: System, statements: tuple[Statement, ...]) -> None:
+    for label, statement in zip(system.coefficient_labels, statements, strict=True):
+        if label.endswith(f".{INTERCEPT}") and statement.values.get("unit", 1.0) != 1.0:
+            raise CardError(
+                f"The card has scaled = true and gives the pooled “{label}” a unit; scaled intercepts are "
+                "compared on the responses' own scale.",
+                where=f"prior card “{card.name}”, [coefficients]",
+                mend="Take the “unit” out, or write the whole card on the raw scale with scaled = false.",
             )
 
 
