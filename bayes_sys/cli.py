@@ -102,7 +102,8 @@ def examine(
 ) -> Task:
     """Check data and design without sampling.
 
-    Computes the classical estimates too. Writes nothing, unless --out names a folder for examination.json and benchmark.csv.
+    Computes the classical estimates too. Writes nothing, unless --out names a folder for examination.json
+    and benchmark.csv.
     """
 
     def work(session: Session) -> Answer:
@@ -132,7 +133,8 @@ def run(
 ) -> Task:
     """Do the whole job, from study to page.
 
-    Examines data and design, samples, holds the draws against the gate, writes tables and page. Writes the folder runs/<name of the study file>, unless --out names another place.
+    Examines data and design, samples, holds the draws against the gate, writes tables and page. Writes the
+    folder runs/<name of the study file>, unless --out names another place.
     """
     return _run_task(study, out, overwrite, (chains, warmup, draws, seed, engine), quiet)
 
