@@ -67,7 +67,7 @@ def classical_estimates(system: System, *, divisor: str = "T") -> Benchmark:
     ols, reasons = least_squares(system)
     bases = None if reasons else build_bases(system.factor)
     if bases is None:
-        empty = "There is none, because " + reasons["ols"][0].lower() + reasons["ols"][1:]
+        empty = f"{reasons['ols']} A joint estimate needs every equation."
         return Benchmark(ols, None, None, {**reasons, "fgls": empty, "iterated": empty}, divisor)
     fgls, reason = two_step(bases, divisor)
     if fgls is None:

@@ -214,7 +214,7 @@ def _by_chi_square(test: str, statistic: float, p: float) -> str:
 
 
 def _by_simulation(test: str, simulations: int, p: float) -> str:
-    return f"By the {test} test ({p_value(p)} from {simulations} simulated systems of this very design)"
+    return f"By the {test} test ({p_value(p)} from {simulations} simulated systems of this very design, Gaussian errors)"
 
 
 def _shared(name: str, p: float, how: str) -> Check:
@@ -243,7 +243,7 @@ def _gain(system: System, fgls: Estimate, bases: Bases) -> Iterator[Check]:
         None,
         FINE,
         "At the estimated error covariance the joint estimate shortens standard errors by "
-        f"{_percent(median)} in the middle and {_percent(float(reduction[best]))} at most "
+        f"{_percent(median)} for the typical coefficient and {_percent(float(reduction[best]))} at most "
         f"({system.coefficient_labels[best]}). In short series these gains look larger than they are, "
         "because the covariance is itself estimated (Freedman and Peters 1984).",
     )
@@ -256,8 +256,8 @@ def _gain(system: System, fgls: Estimate, bases: Bases) -> Iterator[Check]:
         None,
         FINE,
         "With errors correlated as estimated, no regressors could gain more than "
-        f"{_percent(float(bound[most]))} in any equation (“{system.names[most]}”): that much of its "
-        "errors the other equations explain.",
+        f"{_percent(float(bound[most]))} of a standard error in any equation (“{system.names[most]}”): the "
+        "other equations explain no more of its errors than that.",
     )
 
 
