@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from bayes_sys.posterior.summary import TAIL, flat_draws, thinned
+from bayes_sys.posterior.summary import TAIL, flat_draws
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -16,27 +16,20 @@ if TYPE_CHECKING:
 
 Array = NDArray[np.float64]
 
-MAX_CELLS = 200_000_000
-"""Periods times equations times draws that the bands may cost; beyond it draws are thinned evenly."""
-MIN_DRAWS = 100
+MAX_CELLS = 10_000_000
+"""Periods x equations x draws up to which the bands are exact; beyond it the mixture is taken as a normal."""
 CHUNK_CELLS = 2_000_000
 Z_TAIL = 1.6448536269514722
 """The 95% quantile of the standard normal."""
 
 
-def band_draws(system: System, n_draws: int) -> NDArray[np.int64]:
-    """Return which draws the bands are made from.
-
-    All of them while periods x equations x draws stays within ``MAX_CELLS``; evenly spaced ones beyond, never
-    fewer than ``MIN_DRAWS``. The errors are integrated out exactly, so few draws cost little precision: what
-    is thinned is the uncertainty of the parameters, which is small in systems so large.
-    """
-    cells = max(1, system.n_periods * system.n_equations)
-    return thinned(n_draws, max(MIN_DRAWS, MAX_CELLS // cells))
-
-
 def predictive_band(posterior: xr.DataTree, system: System) -> tuple[Array, Array, Array]:
     """Return the posterior mean of the regression and the 90% predictive band of the outcomes.
+
+    While periods x equations x draws stays within ``MAX_CELLS`` the band is the exact quantile of the mixture
+    over all draws. Beyond it the mixture is replaced by the normal of the same mean and variance; in systems
+    so large the two differ by about 0.1 / n_periods error standard deviations (the excess kurtosis that an
+    uncertain scale brings is about 6 / n_periods).
 
     Parameters
     ----------
@@ -52,23 +45,42 @@ def predictive_band(posterior: xr.DataTree, system: System) -> tuple[Array, Arra
         which holds both the error and what is not known about coefficients and scale. Units of the response.
     """
     coefficients, scales = flat_draws(posterior, "coefficients"), flat_draws(posterior, "scales")
-    keep = band_draws(system, len(coefficients))
-    centre = coefficients.mean(axis=0)
+    exact = system.responses.size * len(scales) <= MAX_CELLS
     mean, low, high = (np.empty(system.responses.shape) for _ in range(3))
+    step = max(1, CHUNK_CELLS // len(scales))
     for i, equation in enumerate(system.equations):
-        where = system.slice_of(i)
-        mean[:, i] = equation.design @ centre[where]
-        some, sizes = coefficients[keep, where], scales[keep, i]
-        step = max(1, CHUNK_CELLS // len(keep))
-        for start in range(0, system.n_periods, step):
+        mine, sizes = coefficients[:, system.slice_of(i)], scales[:, i]
+        mean[:, i], spread = mixture_moments(equation.design, mine, sizes)
+        low[:, i], high[:, i] = mean[:, i] - Z_TAIL * spread, mean[:, i] + Z_TAIL * spread
+        for start in range(0, system.n_periods if exact else 0, step):
             rows = slice(start, start + step)
-            locations = equation.design[rows] @ some.T
-            low[rows, i] = mixture_quantile(locations, sizes, TAIL, -Z_TAIL)
-            high[rows, i] = mixture_quantile(locations, sizes, 1 - TAIL, Z_TAIL)
+            locations = equation.design[rows] @ mine.T
+            low[rows, i] = mixture_quantile(locations, sizes, TAIL, -Z_TAIL, low[rows, i])
+            high[rows, i] = mixture_quantile(locations, sizes, 1 - TAIL, Z_TAIL, high[rows, i])
     return mean, low, high
 
 
-def mixture_quantile(locations: Array, scales: Array, level: float, z: float) -> Array:
+def mixture_moments(design: Array, coefficients: Array, scales: Array) -> tuple[Array, Array]:
+    """Return mean and standard deviation of the predictive mixture at every period.
+
+    Parameters
+    ----------
+    design : array of float, shape (n_periods, p_i)
+    coefficients : array of float, shape (n_draws, p_i)
+    scales : array of float, shape (n_draws,)
+
+    Returns
+    -------
+    tuple of two arrays of float, each of shape (n_periods,)
+    """
+    centre = coefficients.mean(axis=0)
+    # a factor of the draws' covariance: variances as sums of squares cannot come out negative
+    factor = np.linalg.qr(coefficients - centre, mode="r") / np.sqrt(len(coefficients))
+    variance = ((design @ factor.T) ** 2).sum(axis=1) + (scales**2).mean()
+    return design @ centre, np.sqrt(variance)
+
+
+def mixture_quantile(locations: Array, scales: Array, level: float, z: float, guess: Array) -> Array:
     """Return a quantile of equal mixtures of normals, one mixture a row, by bracketed Newton steps.
 
     Parameters
@@ -80,18 +92,20 @@ def mixture_quantile(locations: Array, scales: Array, level: float, z: float) ->
     z : float
         The standard normal's quantile at ``level``: every component's own quantile is ``location + z scale``,
         so the mixture's lies between the least and the greatest of these.
+    guess : array of float, shape (n_rows,)
+        Where to start.
 
     Returns
     -------
     array of float, shape (n_rows,)
-        To 1e-8 of the smallest scale, or the last digits of the locations.
+        To 1e-6 of the smallest scale or better.
     """
     from scipy.special import ndtr
 
     own = locations + z * scales
     low, high = own.min(axis=1), own.max(axis=1)
-    guess = own.mean(axis=1)
-    tolerance = 1e-8 * scales.min() + 4 * np.finfo(float).eps * np.abs(own).max(initial=0.0)
+    guess = np.clip(guess, low, high)
+    tolerance = 1e-6 * scales.min() + 4 * np.finfo(float).eps * np.abs(own).max(initial=0.0)
     for _ in range(100):
         standard = (guess[:, None] - locations) / scales
         excess = ndtr(standard).mean(axis=1) - level

@@ -170,8 +170,8 @@ def fitted_table(posterior: xr.DataTree, system: System) -> pd.DataFrame:
     ``mean`` is the posterior mean of the regression ``X beta``. ``q5`` and ``q95`` bound the 90% predictive
     band of an outcome with the same regressors: they hold the error as well as what is not known about the
     coefficients and the error scale, so about nine in ten observed points should lie inside. ``residual`` is
-    ``observed - mean``. In very large systems the band comes from evenly spaced draws
-    (`bayes_sys.posterior.predictive.band_draws` states the rule).
+    ``observed - mean``. In very large systems the band is that of a normal with the
+    same mean and variance (`bayes_sys.posterior.predictive.predictive_band` says when, and how far off).
 
     Parameters
     ----------
