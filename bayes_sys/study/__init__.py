@@ -1,1 +1,1 @@
-"""The room “study”."""
+"""The room “study”: what the user wrote, and the panel that the tables make of it."""

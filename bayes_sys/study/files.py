@@ -1,0 +1,294 @@
+"""Read a data file into a frame: csv, parquet, xlsx; names checked, cells left as they are."""
+
+from __future__ import annotations
+
+import csv
+import warnings
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from bayes_sys.errors import TableError, nearest
+from bayes_sys.study.spec_data import CsvOptions
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+LARGEST_FILE = 2_000_000_000
+_SEPARATORS = {";": ";", "\t": "\\t", "|": "|", ",": ","}
+
+
+@dataclass(frozen=True)
+class RawTable:
+    """A table as it was found.
+
+    Parameters
+    ----------
+    frame : DataFrame, shape (n_rows, n_columns)
+        Text columns as text (csv: every column), numbers as numbers; the index counts rows from 0.
+    name : str
+        File name or "table given in Python", for messages.
+    options : CsvOptions
+        Decimal sign and marks of missing cells, for text cells.
+    path : Path or None
+        The file; None for a table given in Python.
+    """
+
+    frame: pd.DataFrame
+    name: str
+    options: CsvOptions = field(default_factory=CsvOptions)
+    path: Path | None = None
+
+    def row(self, index: int) -> str:
+        """Return how to find a row: the number of the data row and the line of the file."""
+        line = _line_of(self, index)
+        return f"data row {index + 1}" + (f" (line {line} of the file)" if line else "")
+
+
+def load_table(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
+    """Read a csv, parquet or xlsx file.
+
+    Raises
+    ------
+    TableError
+        If the file is missing, of another kind, too large, damaged, empty, or its header is unusable.
+    """
+    _check_file(path)
+    suffix = path.suffix.lower()
+    if sheet is not None and suffix != ".xlsx":
+        raise TableError("“sheet” is for xlsx files only.", where=path.name, mend="Take it out.")
+    if suffix == ".csv":
+        frame = _read_csv(path, options)
+    elif suffix == ".parquet":
+        frame = _read_parquet(path)
+    elif suffix == ".xlsx":
+        frame = _read_xlsx(path, sheet)
+    else:
+        raise TableError(
+            f"files ending in “{path.suffix}” are not read.",
+            where=path.name,
+            mend="Save it as .csv, .parquet or .xlsx.",
+        )
+    return check_table(RawTable(frame, path.name, options, path))
+
+
+def given_table(table: pd.DataFrame, options: CsvOptions) -> RawTable:
+    """Take a table given in Python; named index levels become columns."""
+    import pandas as pd
+
+    name = "table given in Python"
+    if not isinstance(table, pd.DataFrame):
+        raise TableError(f"found {type(table).__name__}, expected a pandas.DataFrame.", where=name)
+    named = [n for n in table.index.names if n is not None and n not in table.columns]
+    frame = table.reset_index(level=named) if named else table
+    frame = frame.reset_index(drop=True)
+    _check_header([str(c) for c in frame.columns], name)
+    frame.columns = pd.Index([str(c) for c in frame.columns])
+    return check_table(RawTable(frame, name, options))
+
+
+def check_table(table: RawTable) -> RawTable:
+    """Refuse a table without rows; return it otherwise."""
+    if table.frame.empty:
+        raise TableError(
+            "the table has a header but no rows.", where=table.name, mend="Is this the right file?"
+        )
+    return table
+
+
+def _check_file(path: Path) -> None:
+    if path.is_dir():
+        raise TableError("this is a folder, not a data file.", where=str(path))
+    if not path.exists():
+        folder = path.parent
+        known = [p.name for p in sorted(folder.iterdir())] if folder.is_dir() else []
+        known = [n for n in known if n.lower().endswith((".csv", ".parquet", ".xlsx"))]
+        mend = nearest(path.name, known) or "The path is relative to the study file."
+        raise TableError("there is no such file.", where=str(path), mend=mend)
+    size = path.stat().st_size
+    if size == 0:
+        raise TableError("the file is empty.", where=path.name, mend="Is this the right file?")
+    if size > LARGEST_FILE:
+        raise TableError(
+            f"the file has {size / 1e9:.1f} GB; at most {LARGEST_FILE / 1e9:.0f} GB are read.",
+            where=path.name,
+            mend="Keep only the columns and periods the study needs.",
+        )
+
+
+def _check_header(names: list[str], where: str) -> None:
+    for i, name in enumerate(names):
+        if name in names[:i]:
+            raise TableError(
+                f"two columns are called “{name}” (columns {names.index(name) + 1} and {i + 1}).",
+                where=where,
+                mend="Rename one.",
+            )
+
+
+def _read_csv(path: Path, options: CsvOptions) -> pd.DataFrame:
+    import pyarrow as pa
+    from pyarrow import csv as arrow_csv
+
+    names = _csv_header(path, options)
+    try:
+        table = arrow_csv.read_csv(
+            path,
+            read_options=arrow_csv.ReadOptions(column_names=names, skip_rows_after_names=1),
+            parse_options=arrow_csv.ParseOptions(
+                delimiter=options.separator, newlines_in_values=_quotes_a_newline(path)
+            ),
+            convert_options=arrow_csv.ConvertOptions(
+                column_types={n: pa.string() for n in names}, strings_can_be_null=False
+            ),
+        )
+    except pa.ArrowInvalid as error:
+        raise _csv_fault(path, options, len(names), error) from None
+    frame: pd.DataFrame = table.to_pandas()
+    return frame
+
+
+def _csv_header(path: Path, options: CsvOptions) -> list[str]:
+    try:
+        with path.open(encoding="utf-8-sig", newline="") as stream:
+            names = next((r for r in csv.reader(stream, delimiter=options.separator) if r), [])
+    except UnicodeDecodeError:
+        raise _not_utf8(path) from None
+    except csv.Error as error:
+        raise TableError(f"the header cannot be read ({error}).", where=f"{path.name}, line 1") from None
+    names = [n.strip() for n in names]
+    if len(names) <= 1:
+        _refuse_one_column("".join(names), path, options)
+    if not any(names):
+        raise TableError("the header line is empty.", where=f"{path.name}, line 1")
+    names = [n or f"column {i + 1}" for i, n in enumerate(names)]
+    _check_header(names, path.name)
+    return names
+
+
+def _refuse_one_column(header: str, path: Path, options: CsvOptions) -> None:
+    for separator, written in _SEPARATORS.items():
+        if separator != options.separator and separator in header:
+            decimal = ', decimal = ","' if separator == ";" else ""
+            raise TableError(
+                f"found a single column “{header[:60]}” with the separator “{options.separator}”; "
+                f"the cells seem to be separated by “{written}”.",
+                where=f"{path.name}, line 1",
+                mend=f'Add csv = {{ separator = "{written}"{decimal} }} under [data]'
+                + (" (decimal only if numbers are written 1,5)." if decimal else "."),
+            )
+
+
+def _quotes_a_newline(path: Path) -> bool:
+    # Reading in parallel is only safe when no quoted cell runs over a line; few files have quotes at all.
+    with path.open("rb") as stream:
+        while block := stream.read(1 << 24):
+            if b'"' in block:
+                return True
+    return False
+
+
+def _csv_fault(path: Path, options: CsvOptions, n_names: int, error: Exception) -> TableError:
+    if not _is_utf8(path):
+        return _not_utf8(path)
+    with path.open(encoding="utf-8-sig", newline="") as stream:
+        reader = csv.reader(stream, delimiter=options.separator)
+        for cells in reader:
+            if cells and len(cells) != n_names:
+                return TableError(
+                    f"found {len(cells)} cells, expected {n_names} as in the header.",
+                    where=f"{path.name}, line {reader.line_num}",
+                    mend="Put cells that hold the separator in double quotes, or mend the line.",
+                )
+    return TableError(f"the file cannot be read as csv ({error}).", where=path.name)
+
+
+def _is_utf8(path: Path) -> bool:
+    try:
+        with path.open(encoding="utf-8") as stream:
+            for _ in stream:
+                pass
+    except UnicodeDecodeError:
+        return False
+    return True
+
+
+def _not_utf8(path: Path) -> TableError:
+    line = 0
+    with path.open("rb") as stream:
+        for raw in stream:
+            line += 1
+            try:
+                raw.decode("utf-8")
+            except UnicodeDecodeError:
+                break
+    return TableError(
+        "the file is not UTF-8 text.", where=f"{path.name}, line {line}", mend="Save it as csv in UTF-8."
+    )
+
+
+def _read_parquet(path: Path) -> pd.DataFrame:
+    import pyarrow as pa
+    from pyarrow import parquet
+
+    try:
+        table = parquet.ParquetFile(path).read()
+    except (pa.ArrowInvalid, pa.ArrowNotImplementedError, OSError) as error:
+        reason = str(error).splitlines()[0]
+        raise TableError(f"the file cannot be read as parquet ({reason}).", where=path.name) from None
+    _check_header(list(table.column_names), path.name)
+    frame: pd.DataFrame = table.to_pandas(ignore_metadata=True)
+    return frame
+
+
+def _read_xlsx(path: Path, sheet: str | None) -> pd.DataFrame:
+    import pandas as pd
+
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            book: Any = pd.ExcelFile(path, engine="openpyxl")
+    except Exception as error:
+        # openpyxl lets through whatever its zip and XML layers raise; to the user it is one fault.
+        raise TableError(f"the file cannot be read as xlsx ({error}).", where=path.name) from None
+    with book:
+        if sheet is not None and sheet not in book.sheet_names:
+            raise TableError(
+                f"there is no sheet “{sheet}”.", where=path.name, mend=nearest(sheet, book.sheet_names)
+            )
+        cells = book.parse(
+            sheet if sheet is not None else 0, header=None, dtype=object, keep_default_na=False
+        )
+    cells = cells.astype(object).where(~cells.isin([""]), None)
+    if cells.empty:
+        raise TableError("the sheet is empty.", where=path.name, mend="Name another with sheet = “…”.")
+    names = [_header_text(v, i) for i, v in enumerate(cells.iloc[0])]
+    _check_header(names, path.name)
+    body = cells.iloc[1:]
+    body = body[body.notna().any(axis=1)]
+    # The index keeps the line of the sheet for messages until the table is checked.
+    frame = pd.DataFrame({n: body.iloc[:, i].to_numpy(dtype=object) for i, n in enumerate(names)})
+    frame.attrs["lines"] = [int(i) + 1 for i in body.index]
+    return frame
+
+
+def _header_text(value: object, position: int) -> str:
+    text = "" if value is None or value != value else str(value).strip()
+    return text or f"column {position + 1}"
+
+
+def _line_of(table: RawTable, index: int) -> int | None:
+    if "lines" in table.frame.attrs:
+        return int(table.frame.attrs["lines"][index])
+    if table.path is None or table.path.suffix.lower() != ".csv":
+        return None
+    if table.path.stat().st_size > 200_000_000:
+        return index + 2
+    # Blank lines and quoted line breaks shift lines against rows, so count as the csv reader does.
+    with table.path.open(encoding="utf-8-sig", newline="") as stream:
+        reader = csv.reader(stream, delimiter=table.options.separator)
+        rows = (reader.line_num for cells in reader if cells)
+        for count, line in enumerate(rows):
+            if count == index + 1:
+                return line
+    return index + 2
