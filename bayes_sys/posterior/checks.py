@@ -189,7 +189,8 @@ def predictive_checks(
 
 def neighbours(ordinals: NDArray[np.int64]) -> Array:
     """Return 1 where the next one is the very next period, 0 where a gap breaks the pair."""
-    return (np.diff(ordinals) == 1).astype(float)
+    joined: Array = (np.diff(ordinals) == 1).astype(np.float64)
+    return joined
 
 
 def compare(sample: Sample, rng: np.random.Generator) -> tuple[Array, Array]:
