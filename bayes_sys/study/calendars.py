@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import calendar
 import datetime as dt
-import math
 import re
 from dataclasses import dataclass
 from typing import Any
@@ -26,10 +25,13 @@ _WANTED = "Write whole numbers, dates as 2024-07-15, quarters as 2024-Q3 or mont
 
 
 class PeriodFault(ValueError):
-    """A period that cannot be read; callers add the place and raise an error for users."""
+    """A period that cannot be read; callers add the place and raise an error for users.
 
-    def __init__(self, what: str, mend: str = "") -> None:
-        self.what, self.mend = what, mend
+    ``index`` is the position of the value among those given, where one value alone is at fault.
+    """
+
+    def __init__(self, what: str, mend: str = "", index: int | None = None) -> None:
+        self.what, self.mend, self.index = what, mend, index
         super().__init__(f"{what} {mend}".strip())
 
 
@@ -56,8 +58,8 @@ def read(value: object) -> Written:
     if isinstance(value, (bool, np.bool_)):
         raise PeriodFault(f"found {value}, expected a period.", _WANTED)
     if isinstance(value, (int, np.integer, float, np.floating)):
-        number = float(value)
-        if not math.isfinite(number) or number != int(number) or abs(number) >= 1e15:
+        number: Any = value
+        if not abs(number) < 10**15 or number != int(number):
             raise PeriodFault(f"found {value}, expected a period.", _WANTED)
         return Written("a whole number", int(value))
     if isinstance(value, np.datetime64):

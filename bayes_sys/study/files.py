@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import csv
 import warnings
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
 
 from bayes_sys.errors import TableError, nearest
 from bayes_sys.study.spec_data import CsvOptions
@@ -38,9 +41,20 @@ class RawTable:
     name: str
     options: CsvOptions = field(default_factory=CsvOptions)
     path: Path | None = None
+    kept: NDArray[np.int64] | None = None
+    """Row numbers in the file, where rows were taken out."""
+    lines: tuple[int, ...] = ()
+    """Line of each row of a sheet."""
+
+    def only(self, rows: NDArray[np.int64]) -> RawTable:
+        """Return the table with some of its rows."""
+        if len(rows) == len(self.frame):
+            return self
+        return replace(self, frame=self.frame.iloc[rows], kept=rows)
 
     def row(self, index: int) -> str:
         """Return how to find a row: the number of the data row and the line of the file."""
+        index = index if self.kept is None else int(self.kept[index])
         line = _line_of(self, index)
         return f"data row {index + 1}" + (f" (line {line} of the file)" if line else "")
 
@@ -55,6 +69,7 @@ def load_table(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
     """
     _check_file(path)
     suffix = path.suffix.lower()
+    lines: tuple[int, ...] = ()
     if sheet is not None and suffix != ".xlsx":
         raise TableError("“sheet” is for xlsx files only.", where=path.name, mend="Take it out.")
     if suffix == ".csv":
@@ -62,14 +77,14 @@ def load_table(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
     elif suffix == ".parquet":
         frame = _read_parquet(path)
     elif suffix == ".xlsx":
-        frame = _read_xlsx(path, sheet)
+        frame, lines = _read_xlsx(path, sheet)
     else:
         raise TableError(
             f"files ending in “{path.suffix}” are not read.",
             where=path.name,
             mend="Save it as .csv, .parquet or .xlsx.",
         )
-    return check_table(RawTable(frame, path.name, options, path))
+    return check_table(RawTable(frame, path.name, options, path, lines=lines))
 
 
 def given_table(table: pd.DataFrame, options: CsvOptions) -> RawTable:
@@ -241,7 +256,7 @@ def _read_parquet(path: Path) -> pd.DataFrame:
     return frame
 
 
-def _read_xlsx(path: Path, sheet: str | None) -> pd.DataFrame:
+def _read_xlsx(path: Path, sheet: str | None) -> tuple[pd.DataFrame, tuple[int, ...]]:
     import pandas as pd
 
     try:
@@ -266,10 +281,8 @@ def _read_xlsx(path: Path, sheet: str | None) -> pd.DataFrame:
     _check_header(names, path.name)
     body = cells.iloc[1:]
     body = body[body.notna().any(axis=1)]
-    # The index keeps the line of the sheet for messages until the table is checked.
     frame = pd.DataFrame({n: body.iloc[:, i].to_numpy(dtype=object) for i, n in enumerate(names)})
-    frame.attrs["lines"] = [int(i) + 1 for i in body.index]
-    return frame
+    return frame, tuple(int(i) + 1 for i in body.index)
 
 
 def _header_text(value: object, position: int) -> str:
@@ -278,8 +291,8 @@ def _header_text(value: object, position: int) -> str:
 
 
 def _line_of(table: RawTable, index: int) -> int | None:
-    if "lines" in table.frame.attrs:
-        return int(table.frame.attrs["lines"][index])
+    if table.lines:
+        return table.lines[index]
     if table.path is None or table.path.suffix.lower() != ".csv":
         return None
     if table.path.stat().st_size > 200_000_000:

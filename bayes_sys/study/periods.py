@@ -141,7 +141,7 @@ def find_periods(values: Iterable[object], name: str = "period") -> tuple[Period
         If a value is no period, if kinds are mixed, or if the values are no periods but, say, record numbers.
     """
     listed = list(values)
-    written = [calendars.read(v) for v in listed]
+    written = [_read(v, i) for i, v in enumerate(listed)]
     _check_one_form(written, listed)
     kind, positions, step = calendars.recognise(written)
     anchor = int(positions.min()) % step
@@ -152,13 +152,21 @@ def find_periods(values: Iterable[object], name: str = "period") -> tuple[Period
     return seed.between(first, last), ordinals
 
 
+def _read(value: object, index: int) -> Written:
+    try:
+        return calendars.read(value)
+    except PeriodFault as error:
+        raise PeriodFault(error.what, error.mend, index) from None
+
+
 def _check_one_form(written: list[Written], values: list[object]) -> None:
     first = written[0]
-    for other, value in zip(written, values, strict=True):
+    for i, (other, value) in enumerate(zip(written, values, strict=True)):
         if other.form != first.form:
             raise PeriodFault(
                 f"{values[0]} is written as {first.form}, {value} as {other.form}.",
                 "Write all periods the same way.",
+                i,
             )
 
 

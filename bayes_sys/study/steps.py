@@ -165,11 +165,11 @@ def _compute(step: Step, x: Matrix, other: Cells | None) -> tuple[Matrix, NDArra
 
 
 def _rolling_mean(cells: Cells, length: int) -> Cells:
-    total, marks = cells.values / length, cells.marks
+    total, marks = cells.values, cells.marks
     for k in range(1, min(length, cells.values.shape[0] + 1)):
-        total = total + shift(cells.values, k) / length
+        total = total + shift(cells.values, k)
         marks = _join(marks, _shift_marks(cells.marks, k))
-    return Cells(total, marks)
+    return Cells(total / length, marks)
 
 
 def moments(cells: Cells, in_sample: NDArray[np.bool_]) -> tuple[Matrix, Matrix]:

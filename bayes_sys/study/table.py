@@ -9,24 +9,24 @@ import numpy as np
 from numpy.typing import NDArray
 
 from bayes_sys.errors import StudyError, TableError, nearest
-from bayes_sys.study import calendars
 from bayes_sys.study.calendars import PeriodFault
 from bayes_sys.study.cells import numbers, period_values, unit_names
-from bayes_sys.study.derive import Lineages, derive_columns
-from bayes_sys.study.equations import plan_equation, used_columns, wide_equations
+from bayes_sys.study.derive import derive_columns
+from bayes_sys.study.equations import EquationPlan, plan_equation, used_columns, wide_equations
 from bayes_sys.study.faults import key_path
 from bayes_sys.study.files import RawTable, given_table, load_table
 from bayes_sys.study.panel import Panel
 from bayes_sys.study.periods import Periods, find_periods
 from bayes_sys.study.shared import add_shared_columns, shared_reach
 from bayes_sys.study.spec import Study
+from bayes_sys.study.spec_base import PLACEHOLDER, expand
 from bayes_sys.study.store import Cells, Store, spread
 
 if TYPE_CHECKING:
     import pandas as pd
 
 MOST_UNITS = 100_000
-MOST_CELLS = 500_000_000
+MOST_CELLS = 200_000_000
 
 
 @dataclass(frozen=True)
@@ -79,7 +79,7 @@ def read_panel(study: Study, table: pd.DataFrame | None = None) -> Panel:
         for column, key in needed:
             if not store.has(column):
                 raise store.missing(column, key)
-    return Panel(layout.periods, in_sample, _frames(store, layout, lineage, plans), lineage, raw.name)
+    return Panel(layout.periods, in_sample, _frames(store, layout, plans), lineage, raw.name)
 
 
 def _load(study: Study, table: pd.DataFrame | None) -> RawTable:
@@ -164,12 +164,6 @@ def _grid(study: Study, raw: RawTable, rows: NDArray[np.int64]) -> tuple[Periods
     column = study.data.period
     codes, values = period_values(raw, column, rows)
     where = f"{raw.name}, column “{column}”"
-    for code, value in enumerate(values):
-        try:
-            calendars.read(value)
-        except PeriodFault as error:
-            row = int(rows[np.flatnonzero(codes == code)[0]])
-            raise TableError(error.what, where=f"{where}, {raw.row(row)}", mend=error.mend) from None
     try:
         periods, ordinals = find_periods(values, column)
         first = int(periods.ordinals[0])
@@ -177,6 +171,8 @@ def _grid(study: Study, raw: RawTable, rows: NDArray[np.int64]) -> tuple[Periods
         if reach:
             periods = periods.between(first - reach, int(periods.ordinals[-1]))
     except PeriodFault as error:
+        if error.index is not None:
+            where += f", {raw.row(int(rows[np.flatnonzero(codes == error.index)[0]]))}"
         raise TableError(error.what, where=where, mend=error.mend) from None
     return periods, ordinals[codes] - int(periods.ordinals[0])
 
@@ -230,7 +226,7 @@ def _fill(store: Store, raw: RawTable, layout: _Layout) -> None:
     """Put every column of numbers into the store; text is an error only where the study uses it."""
     store.raw_names.update(str(c) for c in raw.frame.columns)
     used = used_columns(store.study, layout.equations)
-    part = raw
+    part = raw.only(layout.rows)
     for column in raw.frame.columns:
         try:
             values = numbers(part, column)
@@ -238,7 +234,7 @@ def _fill(store: Store, raw: RawTable, layout: _Layout) -> None:
             if column in used:
                 raise
             continue
-        store.columns[column] = _scatter(values[layout.rows], layout, store)
+        store.columns[column] = _scatter(values, layout, store)
 
 
 def _scatter(values: NDArray[np.float64], layout: _Layout, store: Store) -> Cells:
@@ -291,7 +287,7 @@ def _excluded(study: Study, periods: Periods, i: int, value: Any) -> int:
     return ordinal
 
 
-def _frames(store: Store, layout: _Layout, lineage: Lineages, plans: list[Any]) -> dict[str, pd.DataFrame]:
+def _frames(store: Store, layout: _Layout, plans: list[EquationPlan]) -> dict[str, pd.DataFrame]:
     import pandas as pd
 
     index = pd.Index(layout.periods.ordinals, name=layout.periods.name)
@@ -299,20 +295,18 @@ def _frames(store: Store, layout: _Layout, lineage: Lineages, plans: list[Any]) 
     if store.study.data.is_wide:
         raw = {n: c.values[:, 0] for n, c in store.columns.items() if n in store.raw_names}
         common = pd.DataFrame(raw, index=index)
+    own_names = [n for n in store.columns if common is None or n not in store.raw_names]
     frames = {}
     for j, plan in enumerate(plans):
-        own = {
-            n: c.values[:, j] for n, c in store.columns.items() if common is None or n not in store.raw_names
-        }
-        pooled = {r.column for r in plan.regressors} | {plan.response}
-        pooled |= {column for equation, column in _own_pool(store, lineage, plan.name)}
-        own |= {n: store.pool[n].values[:, 0] for n in sorted(pooled & set(store.pool))}
+        own = {n: store.columns[n].values[:, j] for n in own_names}
+        own |= {n: store.pool[n].values[:, 0] for n in _pooled(store, plan)}
         frame = pd.DataFrame(own, index=index)
         frames[plan.name] = frame if common is None else pd.concat([common, frame], axis=1)
     return frames
 
 
-def _own_pool(store: Store, lineage: Lineages, equation: str) -> list[tuple[str, str]]:
-    from bayes_sys.study.spec_base import PLACEHOLDER, expand
-
-    return [(equation, expand(n, equation)) for n in store.study.derive if PLACEHOLDER in n]
+def _pooled(store: Store, plan: EquationPlan) -> list[str]:
+    """Return the columns written with ``{equation}`` that one equation makes, or borrows from others."""
+    names = [expand(n, plan.name) for n in store.study.derive if PLACEHOLDER in n]
+    names += [plan.response, *(r.column for r in plan.regressors)]
+    return [n for n in dict.fromkeys(names) if n in store.pool]
