@@ -59,48 +59,6 @@ class Centred:
     levels: Array
 
 
-def check_names(equation: str, names: Sequence[str], *, intercept: bool, where: str) -> None:
-    """Refuse regressor names that could not be told apart, or no regressors at all.
-
-    Parameters
-    ----------
-    equation : str
-    names : sequence of str
-        Names of the regressors as the study lists them, without the intercept.
-    intercept : bool
-        Whether the equation has a constant term.
-    where : str
-        Study file, for the message.
-    """
-    place = f"{where}, equation “{equation}”"
-    if not names and not intercept:
-        raise DesignError(
-            "there is neither a regressor nor an intercept, so nothing is left to estimate.",
-            where=place,
-            mend="List regressors, or set intercept = true.",
-        )
-    for name in names:
-        if "." in name:
-            raise DesignError(
-                f"the regressor name “{name}” has a dot, but dots part equation and regressor in labels.",
-                where=place,
-                mend=f'Give it another name: {{ name = "{name.replace(".", "_")}", column = "{name}" }}.',
-            )
-        if name == INTERCEPT:
-            raise DesignError(
-                f"“{INTERCEPT}” is the name of the constant term and cannot name a regressor.",
-                where=place,
-                mend='Give the regressor another name: { name = "...", column = "intercept" }.',
-            )
-    twice = next((n for k, n in enumerate(names) if n in names[:k]), None)
-    if twice is not None:
-        raise DesignError(
-            f"the regressor “{twice}” is listed twice.",
-            where=place,
-            mend="List it once, or give the second one a name of its own.",
-        )
-
-
 def check_design(system: System, *, source: str) -> None:
     """Refuse a system that no amount of data would identify.
 

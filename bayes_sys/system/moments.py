@@ -48,7 +48,7 @@ class Factor:
     @property
     def n_distinct(self) -> int:
         """Number of distinct regressor columns over all equations."""
-        return self.triangle.shape[1] - self.n_equations
+        return int(self.triangle.shape[1]) - self.n_equations
 
     def regressors(self, equation: int) -> Array:
         """Return the factor's columns of one equation's regressors, shape (n_rows, p_i)."""

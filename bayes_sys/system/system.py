@@ -94,7 +94,7 @@ class System:
     @property
     def n_periods(self) -> int:
         """Number of periods in the sample, T."""
-        return self.responses.shape[0]
+        return int(self.responses.shape[0])
 
     @property
     def n_equations(self) -> int:

@@ -18,6 +18,8 @@ from numpy.typing import NDArray
 
 SEED = 20_250_411
 QUARTERS = [f"{year}-Q{quarter}" for year in range(2014, 2024) for quarter in range(1, 5)]
+# The economy is known one quarter longer, so that the first change of unemployment is known too.
+ECONOMY_QUARTERS = ["2013-Q4", *QUARTERS]
 
 SEGMENTS = ("cards", "motor", "homes", "shops", "workshops", "farms")
 REGRESSORS = ("intercept", "unemployment_change", "rate_spread")
@@ -50,9 +52,9 @@ def correlation() -> Array:
 
 def make_unemployment(rng: np.random.Generator) -> Array:
     """Unemployment in percent: it drifts back to its level, with one recession in the seventh year."""
-    start = QUARTERS.index("2020-Q2")
+    start = ECONOMY_QUARTERS.index("2020-Q2")
     level, change, path = 6.2, 0.0, []
-    for t in range(len(QUARTERS)):
+    for t in range(len(ECONOMY_QUARTERS)):
         push = {0: 1.3, 1: 0.9, 2: 0.3}.get(t - start, 0.0)
         change = 0.4 * change + 0.06 * (5.4 - level) + push + rng.normal(0.0, 0.14)
         level += change
@@ -62,33 +64,30 @@ def make_unemployment(rng: np.random.Generator) -> Array:
 
 def make_spread(rng: np.random.Generator) -> Array:
     """Lending rate less policy rate, percentage points: slow, never below 0.6."""
-    start = QUARTERS.index("2020-Q1")
+    start = ECONOMY_QUARTERS.index("2020-Q1")
     gap, path = 0.0, []
-    for t in range(len(QUARTERS)):
+    for t in range(len(ECONOMY_QUARTERS)):
         gap = 0.75 * gap + rng.normal(0.0, 0.22) + {0: 0.7, 1: 0.5}.get(t - start, 0.0)
         path.append(max(0.6, 2.1 + gap))
     return np.round(np.array(path), 2)
 
 
 def make_losses(rng: np.random.Generator, unemployment: Array, spread: Array) -> Array:
-    """Annualised loss rates in percent, from the truth and shocks with a common factor.
-
-    The change of unemployment before the first quarter is not in the table; it counts as none.
-    """
-    change = np.diff(unemployment, prepend=unemployment[0])
+    """Annualised loss rates in percent, from the truth and shocks with a common factor."""
+    change = np.diff(unemployment)
     factor = rng.standard_normal(len(QUARTERS))
     own = rng.standard_normal((len(QUARTERS), len(SEGMENTS)))
     shocks = SCALES * (factor[:, None] * LOADINGS + own * np.sqrt(1.0 - LOADINGS**2))
     intercept, on_change, on_spread = COEFFICIENTS.T
-    return np.exp(intercept + np.outer(change, on_change) + np.outer(spread, on_spread) + shocks)
+    return np.exp(intercept + np.outer(change, on_change) + np.outer(spread[1:], on_spread) + shocks)
 
 
-def table_text(header: list[str], columns: list[list[str]]) -> str:
+def table_text(header: list[str], quarters: list[str], columns: list[list[str]]) -> str:
     """Return a table as CSV, one row per quarter."""
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
     writer.writerow(header)
-    writer.writerows(zip(QUARTERS, *columns, strict=True))
+    writer.writerows(zip(quarters, *columns, strict=True))
     return out.getvalue()
 
 
@@ -114,13 +113,11 @@ def main(folder: Path) -> None:
     rng = np.random.default_rng(SEED)
     unemployment, spread = make_unemployment(rng), make_spread(rng)
     losses = make_losses(rng, unemployment, spread)
+    loss_columns = [[f"{v:.3f}" for v in column] for column in losses.T]
     economy = [[f"{v:.1f}" for v in unemployment], [f"{v:.2f}" for v in spread]]
     texts = {
-        "losses.csv": table_text(
-            ["quarter", *(f"{s}_loss" for s in SEGMENTS)],
-            [[f"{v:.3f}" for v in column] for column in losses.T],
-        ),
-        "economy.csv": table_text(["quarter", "unemployment", "rate_spread"], economy),
+        "losses.csv": table_text(["quarter", *(f"{s}_loss" for s in SEGMENTS)], QUARTERS, loss_columns),
+        "economy.csv": table_text(["quarter", "unemployment", "rate_spread"], ECONOMY_QUARTERS, economy),
         "truth.json": truth_text(),
     }
     for name, text in texts.items():
