@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import shutil
 import sys
-from collections.abc import Iterator, Mapping, Sequence
+import textwrap
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, Any
 
 from bayes_sys import runs
-from bayes_sys.classical.check import WARNING
+from bayes_sys.classical.check import FINE, NOTE, WARNING
 from bayes_sys.sampling.progress import Progress, Watcher, unwatched
 
 if TYPE_CHECKING:
@@ -16,6 +18,7 @@ if TYPE_CHECKING:
     from rich.progress import Progress as Bars
 
     from bayes_sys.job import Examination, Run
+    from bayes_sys.system.system import System
 
 STAGES = {
     "reading": "Reading study and data",
@@ -29,7 +32,9 @@ STAGES = {
     "page": "Making the page",
 }
 ONE_BAR = ("warmup", "sampling")
-MOST_ROWS = 40
+MOST_ROWS, MOST_COLUMNS = 40, 6
+WIDEST = 110
+MARKS = {FINE: "", NOTE: "*", WARNING: "!"}
 CAUTION = (
     "Caution: these figures hold under the assumptions of the study and of its prior card. Before a decision "
     "that can hurt someone rests on them, have a qualified person review them, and follow the rules that "
@@ -107,36 +112,35 @@ def _detail(progress: Progress) -> str:
 def run_text(run: Run) -> str:
     """Return the summary of a run: the gate, the coefficients, what to mind, where the page is."""
     manifest, system = run.manifest, run.prepared.system
-    head = [
+    said = [*system.notes, *run.prepared.warnings]
+    lines = [
         str(manifest["title"]),
-        f"{system.n_equations} equations, {system.n_periods} periods, {system.n_coefficients} coefficients; "
-        f"prior card “{run.prepared.card.name}”; {manifest['timings']['total']:.1f} s.",
+        f"{_size(system)} Prior card “{run.prepared.card.name}”. {manifest['timings']['total']:.1f} s.",
         "",
         *gate_lines(manifest["gate"]),
         "",
         *coefficient_lines(run.coefficients),
+        "",
+        *(["What to mind", *points(said), ""] if said else []),
+        *textwrap.wrap(CAUTION, min(shutil.get_terminal_size().columns, WIDEST)),
+        "",
+        f"Page: {run.folder.path / runs.REPORT}",
     ]
-    said = [*run.prepared.system.notes, *run.prepared.warnings]
-    mind = ["", "What to mind:", *(f"- {sentence}" for sentence in said)] if said else []
-    tail = ["", CAUTION, "", f"Page: {run.folder.path / runs.REPORT}"]
-    return "\n".join([*head, *mind, *tail])
+    return "\n".join(lines)
 
 
 def gate_lines(gate: Mapping[str, Any]) -> list[str]:
     """Return the verdict of the gate, with what failed and what helps."""
-    figures = [
-        f"largest R-hat {_number(gate.get('rhat_max'))}",
-        f"fewest effective draws {_number(gate.get('ess_bulk_min'))} (bulk), "
-        f"{_number(gate.get('ess_tail_min'))} (tails)",
-        f"divergences {_number(gate.get('divergences'))}",
-    ]
+    figures = (
+        f"Largest R-hat {_number(gate['rhat_max'])}; fewest effective draws {_whole(gate['ess_bulk_min'])} "
+        f"(bulk) and {_whole(gate['ess_tail_min'])} (tails); divergences {gate['divergences']}."
+    )
     if gate["passed"]:
-        return [f"Gate: passed. {', '.join(figures).capitalize()}."]
+        return [f"The posterior passed the gate. {figures}"]
     return [
-        f"Gate: NOT passed. {', '.join(figures).capitalize()}.",
-        "The figures below are written and marked, but must not be read as results.",
-        *(f"- {failure}" for failure in gate["failures"]),
-        *(f"- {advice}" for advice in gate["advice"]),
+        f"The posterior did NOT pass the gate. {figures}",
+        "Everything is written, and marked; do not read these figures as results.",
+        *points([*gate["failures"], *gate["advice"]]),
     ]
 
 
@@ -153,31 +157,80 @@ def coefficient_lines(table: pd.DataFrame) -> list[str]:
 
 
 def examination_text(examination: Examination) -> str:
-    """Return the checks and the benchmark as text."""
-    system = examination.prepared.system
+    """Return the checks and the classical estimates as text."""
+    system, rows = examination.prepared.system, examination.rows
     lines = [
         system.title,
-        f"{system.n_equations} equations, {system.n_periods} periods, {system.n_coefficients} coefficients.",
-        *(f"- {note}" for note in system.notes),
+        _size(system),
+        *points(system.notes),
         "",
-        "Checks",
+        "The system as a whole",
+        *points(_marked(row) for row in rows if not row["equation"]),
+        "",
+        "Each equation (! may mislead if not mended, * to be known when reading the results)",
+        *equation_matrix(rows, system.names),
+        *points(shared_sentences(row for row in rows if row["equation"] and row["verdict"] != FINE)),
+        "",
+        "Classical estimates, each with its standard error",
+        *benchmark_lines(examination.benchmark),
+        *points(examination.prepared.benchmark.reasons.values()),
     ]
-    cells = [["verdict", "check", "equation", "figure"]]
-    cells += [
-        [_number(row[k]) for k in ("verdict", "name", "equation", "figure")] for row in examination.rows
-    ]
-    lines += aligned(cells, left=3)
-    said = [row["sentence"] for row in examination.rows if row["verdict"] == WARNING]
-    lines += ["", "What to mind:", *(f"- {s}" for s in said)] if said else []
-    lines += ["", "Classical estimates (standard errors beside them)"]
-    columns = list(examination.benchmark.columns)
-    cells = [["", "", *(c.removesuffix("_se") if not c.endswith("_se") else "se" for c in columns[2:])]]
-    cells += [[_number(v) for v in row] for row in examination.benchmark.to_numpy(dtype=object)]
-    lines += aligned(cells, left=2)
-    lines += [f"- {reason}" for reason in examination.prepared.benchmark.reasons.values()]
     if examination.place is None:
-        lines += ["", "Nothing was written; --out DIR keeps examination.json and benchmark.csv."]
+        lines += ["", f"Nothing was written; --out DIR keeps {' and '.join(runs.EXAMINATION_FILES)}."]
     return "\n".join(lines)
+
+
+def equation_matrix(rows: Sequence[Mapping[str, Any]], names: Sequence[str]) -> list[str]:
+    """Return the figures of the checks, one line a check and one column an equation."""
+    found: dict[str, dict[str, str]] = {}
+    for row in rows:
+        if row["equation"]:
+            mark = MARKS[row["verdict"]] or " "
+            found.setdefault(row["name"], {})[row["equation"]] = _number(row["figure"]) + mark
+    lines: list[str] = []
+    for start in range(0, len(names), MOST_COLUMNS):
+        some = names[start : start + MOST_COLUMNS]
+        cells = [["", *(f"{name} " for name in some)]]
+        cells += [
+            [check.replace("_", " "), *(line.get(n, "") for n in some)] for check, line in found.items()
+        ]
+        lines += aligned(cells, left=1)
+    return lines
+
+
+def shared_sentences(rows: Iterable[Mapping[str, Any]]) -> list[str]:
+    """Return the sentences of checks of single equations, those that several share said once."""
+    said: dict[str, list[str]] = {}
+    for row in rows:
+        said.setdefault(f"{MARKS[row['verdict']]} {row['sentence']}", []).append(row["equation"])
+    return [f"{text[0]} {', '.join(names)}: {text[2:]}" for text, names in said.items()]
+
+
+def benchmark_lines(table: pd.DataFrame) -> list[str]:
+    """Return the classical estimates as lines of text."""
+    heads = ["se" if name.endswith("_se") else name for name in table.columns[2:]]
+    cells = [["", "", *heads]]
+    cells += [[_number(value) for value in row] for row in table.to_numpy(dtype=object)]
+    return aligned(cells, left=2)
+
+
+def points(sentences: Iterable[str]) -> list[str]:
+    """Return sentences as points of a list, wrapped to the terminal; a mark in front replaces the dash."""
+    width = min(shutil.get_terminal_size().columns, WIDEST)
+    marked = (s if s[:2] in ("* ", "! ") else f"- {s}" for s in sentences)
+    return [textwrap.fill(s, width, subsequent_indent="  ") for s in marked]
+
+
+def _marked(row: Mapping[str, Any]) -> str:
+    return f"{MARKS[row['verdict']]} {row['sentence']}".strip()
+
+
+def _size(system: System) -> str:
+    counts = (
+        f"{system.n_equations} equations, {system.n_periods} periods, {system.n_coefficients} coefficients"
+    )
+    labels = system.periods.labels
+    return f"{counts}; {labels[0]} to {labels[-1]}." if labels else f"{counts}."
 
 
 def aligned(cells: Sequence[Sequence[str]], *, left: int) -> list[str]:
@@ -191,6 +244,10 @@ def aligned(cells: Sequence[Sequence[str]], *, left: int) -> list[str]:
         for row in cells
     )
     return ["  " + "  ".join(row).rstrip() for row in padded]
+
+
+def _whole(value: float | None) -> str:
+    return "-" if value is None or value != value else f"{value:,.0f}"
 
 
 def _number(value: Any) -> str:
