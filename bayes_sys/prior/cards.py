@@ -33,7 +33,7 @@ mean is normal with this mean and standard deviation. ``spread_scale``: the spre
 shared mean is half-normal with this scale. ``unit`` (1): a member is stated in multiples of this. All members
 of one name must agree in mean, mean_scale and spread_scale. ``pooled`` on ``[coefficients]`` or on an
 ``in.EQUATION`` line speaks of slopes only; an intercept is pooled only where ``[coefficients.of.intercept]``
-or ``[coefficients.of."EQUATION.intercept"]`` says so itself.
+or ``[coefficients.of."EQUATION.intercept"]`` says so itself (it then takes up what the wider lines say).
 
 ``at``, on an intercept's line of a card with ``scaled = false``: a table from regressor to value, the point
 where the intercept's prior is stated; a regressor that is left out stands at 0. It is one key: a more
@@ -132,7 +132,7 @@ class CoefficientTable(CoefficientLine):
                 raise Complaint(
                     f"of.{label[2:]} and of.“{label}” are the same line, written twice.", "Keep one of them."
                 )
-        return {**data, "of": {label.removeprefix("*."): line for label, line in data["of"].items()}}
+        return {**data, "of": _without_stars(data["of"])}
 
     @model_validator(mode="after")
     def _at_only_on_intercepts(self) -> Self:
@@ -236,6 +236,14 @@ class PriorCard(BaseModel):
         return self
 
 
+def _without_stars(lines: Mapping[str, Any]) -> dict[str, Any]:
+    """Call ``*.heat`` what it stands for, ``heat``; leave it where both are there, for the check to find."""
+    return {
+        label.removeprefix("*.") if label.removeprefix("*.") not in lines else label: line
+        for label, line in lines.items()
+    }
+
+
 def _check_quoted(label: str, line: Any) -> None:
     """Catch ``[coefficients.of.alder.x]``, which TOML reads as a table inside a table."""
     if not isinstance(line, Mapping):
@@ -328,6 +336,8 @@ def study_card(study: Study) -> PriorCard:
 
 def _lay_over(base: Mapping[str, Any], top: Mapping[str, Any], path: tuple[str, ...]) -> dict[str, Any]:
     """Lay one nest of tables over another, key by key; a new family drops the keys it does not know."""
+    if path == ("coefficients", "of"):
+        base, top = _without_stars(base), _without_stars(top)
     merged = dict(base)
     families = FAMILIES_OF_TABLE.get(path[0], {}) if path else {}
     family = families.get(top.get("family", ""))

@@ -70,13 +70,19 @@ def _coefficient(card: PriorCard, equation: str, regressor: str) -> Statement:
     """Lay the lines that speak of one coefficient over one another."""
     label = f"{equation}.{regressor}"
     family, values, at = "", dict[str, float](), dict[str, float]()
+    held = dict[
+        str, float
+    ]()  # what pooled lines say of slopes; an intercept takes it up if it asks to be pooled
     for path, line in _coefficient_lines(card, equation, regressor):
         given = line.given
         if regressor == INTERCEPT and path[1:2] != ("of",):
             if line.family == "pooled":
+                held |= given
                 continue
             if family != "pooled":
                 given = {key: value for key, value in given.items() if key not in POOLED_ONLY}
+        if line.family == "pooled":
+            values = {**held, **values}
         family, values = _lay(card, path, family, values, line.family, given, COEFFICIENT_FAMILIES, label)
         at = line.at if line.at is not None else at
     if not family and regressor == INTERCEPT and card.coefficients.family == "pooled":
@@ -135,8 +141,8 @@ def _lay(
             raise CardError(
                 f"“{key}” is not a key of the family “{family}”, which {label} has there.",
                 where=_place(card, path),
-                mend=f"Give the line a family of its own, use the keys {', '.join(families[family].keys)}, or "
-                "speak of fewer coefficients.",
+                mend=f"Give the line a family of its own, use the keys {', '.join(families[family].keys)}, "
+                "or speak of single coefficients.",
             )
     return family, {**values, **given}
 

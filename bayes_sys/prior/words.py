@@ -181,8 +181,8 @@ def _pooled(subject: _Subject, laws: Sequence[Named], point: str) -> str:
     who = subject.plural()
     text = (
         f"{who[0].upper()}{who[1:]}{point} are thought alike: they share a value that lies {_SURE} {shared}, "
-        f"and stray from it with a standard deviation that is as likely below as above {_number(middle)}, and "
-        f"{_SURE} below {_number(high)}"
+        f"and stray from it with a standard deviation that is as likely below as above {_number(middle)}, "
+        f"and {_SURE} below {_number(high)}"
     )
     if all(law.values["unit"] == 1.0 for _, law in laws):
         return text + "."
