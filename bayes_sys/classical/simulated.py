@@ -24,8 +24,8 @@ Array = NDArray[np.float64]
 CHUNK_NUMBERS = 2_000_000
 """Numbers held at a time in the largest array of a chunk of simulations."""
 
-LARGEST_WORK = 1e9
-"""Simulations x K³ of the likelihood-ratio test stay below this: a few seconds at most."""
+LARGEST_WORK = 5e8
+"""Simulations x K³ of the likelihood-ratio test stay below this: about three seconds at most."""
 
 FEWEST = 199
 """Fewer simulations than this say too little about a p-value."""
