@@ -1,0 +1,155 @@
+"""Coefficients given the covariance, one equation by quadrature, the LKJ marginal: against exact answers."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from bayes_sys.model.blocks import correlation as correlation_block
+from bayes_sys.model.conditional import conditional_coefficients
+from bayes_sys.posterior.tables import coefficient_table
+from bayes_sys.prior.cards import build_card
+from bayes_sys.prior.law import CorrelationLaw
+from bayes_sys.prior.resolve import resolve
+from bayes_sys.sampling.engine import sample
+from helpers import make_system
+from reference_posteriors import load, reference_card, reference_system
+from scipy import integrate, stats
+from test_reference_posteriors import our_figures
+
+
+def fixed_covariance_row(name: str) -> dict:
+    return next(row for row in load("fixed_covariance")["rows"] if row["case"] == name)
+
+
+def test_coefficients_given_the_covariance_match_their_closed_form() -> None:
+    # source: partitioned normal formula, checked against the dense density of all observations
+    case, row = load("grun2"), fixed_covariance_row("grun2")
+    system = reference_system(case)
+    prior = resolve(reference_card(case, system), system)
+    covariance = np.outer(row["sd"], row["sd"]) * np.array(row["R"])
+    root = np.linalg.cholesky(covariance)[None]
+    law = conditional_coefficients(
+        system.factor, prior, np.zeros(6), root, np.empty((1, 0)), np.random.default_rng(0)
+    )
+    np.testing.assert_allclose(law.mean[0], list(row["mean"].values()), rtol=1e-9)
+    np.testing.assert_allclose(np.sqrt(law.variance[0]), list(row["post_sd"].values()), rtol=1e-9)
+
+
+def test_draws_of_the_coefficients_given_the_covariance_have_that_law() -> None:
+    case, row = load("grun2"), fixed_covariance_row("grun2")
+    system = reference_system(case)
+    prior = resolve(reference_card(case, system), system)
+    root = np.linalg.cholesky(np.outer(row["sd"], row["sd"]) * np.array(row["R"]))
+    roots = np.broadcast_to(root, (20_000, 2, 2))
+    law = conditional_coefficients(
+        system.factor, prior, np.zeros(6), roots, np.empty((20_000, 0)), np.random.default_rng(3)
+    )
+    for k in range(6):
+        exact = stats.norm(law.mean[0, k], np.sqrt(law.variance[0, k]))
+        assert stats.kstest(law.draw[:, k], exact.cdf).pvalue > 1e-3
+
+
+def test_shrinkage_is_the_conditional_variance_over_the_prior_variance() -> None:
+    # one draw of known covariance, repeated: E[V_kk / tau_k^2] must be the closed form's posterior variance
+    # over the square of the card's scale
+    case, row = load("grun2"), fixed_covariance_row("grun2")
+    system = reference_system(case)
+    posterior = sample(system, reference_card(case, system), draws=200, warmup=200, seed=2)
+    shape = posterior["conditional"]["variance"].shape
+    closed_form = np.square(list(row["post_sd"].values()))
+    posterior["conditional"]["variance"].values[:] = np.broadcast_to(closed_form, shape)
+    table = coefficient_table(posterior, system)
+    scales = np.concatenate(case["prior"]["beta_sd"])
+    np.testing.assert_allclose(table["shrinkage"], closed_form / scales**2, rtol=1e-12)
+    assert ((table["shrinkage"] > 0) & (table["shrinkage"] <= 1)).all()
+
+
+def one_equation() -> tuple[np.ndarray, np.ndarray]:
+    rng = np.random.default_rng(11)
+    x = np.column_stack([np.ones(9), rng.normal(size=9)])
+    return x, x @ [1.0, -0.5] + 0.8 * rng.standard_t(5, size=9)
+
+
+@pytest.mark.parametrize(
+    ("scales", "density"),
+    [
+        ({"family": "half_normal", "scale": 1.0}, stats.halfnorm(scale=1.0)),
+        ({"family": "exponential", "mean": 0.7}, stats.expon(scale=0.7)),
+        ({"family": "lognormal", "median": 0.9, "spread": 0.5}, stats.lognorm(s=0.5, scale=0.9)),
+        ({"family": "half_student_t", "df": 3.0, "scale": 0.8}, None),
+    ],
+    ids=["half_normal", "exponential", "lognormal", "half_student_t"],
+)
+def test_one_equation_matches_quadrature_over_its_scale(scales: dict, density: object) -> None:
+    x, y = one_equation()
+    tau = np.array([2.0, 1.0])
+    log_density = density.logpdf if density else lambda s: stats.t(3, scale=0.8).logpdf(s) + np.log(2)
+
+    def unnormalised(s: float) -> float:
+        covariance = s**2 * np.eye(len(y)) + (x * tau**2) @ x.T
+        return float(np.exp(stats.multivariate_normal(np.zeros(len(y)), covariance).logpdf(y) + log_density(s)))
+
+    def conditional(s: float) -> tuple[np.ndarray, np.ndarray]:
+        variance = np.linalg.inv(x.T @ x / s**2 + np.diag(1 / tau**2))
+        return variance @ (x.T @ y) / s**2, np.diag(variance)
+
+    def expectation(function: object) -> float:
+        return integrate.quad(lambda s: function(s) * unnormalised(s), 1e-3, 12, limit=400, epsabs=0)[0]
+
+    whole = expectation(lambda s: 1.0)
+    system = make_system([x], y[:, None], names=["a"])
+    card = build_card(
+        {
+            "name": "one",
+            "summary": "One equation.",
+            "scaled": False,
+            "coefficients": {
+                "family": "normal",
+                "mean": 0.0,
+                "scale": 1.0,
+                "of": {"intercept": {"scale": 2.0}},
+            },
+            "scales": scales,
+            "correlation": {"family": "lkj", "concentration": 2.0},
+        }
+    )
+    posterior = sample(system, card, draws=5000, seed=4)["posterior"]
+    ours = our_figures(posterior["scales"].values[..., 0])
+    mean = expectation(lambda s: s) / whole
+    sd = np.sqrt(expectation(lambda s: s**2) / whole - mean**2)
+    assert abs(ours["mean"][0] - mean) <= 4 * ours["mean"][1]
+    assert abs(ours["sd"][0] - sd) <= 4 * ours["sd"][1]
+    for figure, probability in (("q05", 0.05), ("q95", 0.95)):
+        value, error = ours[figure]
+        below = integrate.quad(unnormalised, 1e-3, value, limit=400, epsabs=0)[0] / whole
+        assert abs(below - probability) <= 4 * error * unnormalised(value) / whole
+    for k in range(2):
+        ours = our_figures(posterior["coefficients"].values[..., k])
+        first = expectation(lambda s, k=k: conditional(s)[0][k]) / whole
+        second = expectation(lambda s, k=k: conditional(s)[0][k] ** 2 + conditional(s)[1][k]) / whole
+        assert abs(ours["mean"][0] - first) <= 4 * ours["mean"][1]
+        assert abs(ours["sd"][0] - np.sqrt(second - first**2)) <= 4 * ours["sd"][1]
+
+
+@pytest.mark.parametrize("n", [2, 5])
+def test_a_correlation_follows_its_beta_law_under_prior_sampling(n: int) -> None:
+    # source: (r + 1) / 2 ~ Beta(a, a), a = concentration + (N - 2) / 2 (Lewandowski, Kurowicka & Joe 2009)
+    import pymc as pm
+    from pytensor.compile.mode import Mode
+
+    pairs = tuple((a, b) for b in range(n) for a in range(b))
+    coords = {"equation": range(n), "equation_b": range(n), "pair": range(len(pairs))}
+    with pm.Model(coords=coords) as model:
+        correlation_block.declare(CorrelationLaw(2.0), n, pairs)
+    draws = pm.draw(model["correlations"], 1500, random_seed=7, mode=Mode(linker="py", optimizer=None))
+    a = 2.0 + (n - 2) / 2
+    for column in draws.T:
+        assert stats.kstest((column + 1) / 2, stats.beta(a, a).cdf).pvalue > 1e-3
+    exact = next(row for row in load("lkj")["rows"] if (row["N"], row["eta"]) == (n, 2))
+    assert np.abs(draws.std(axis=0) - exact["sd"]).max() < 4 * exact["sd"] / np.sqrt(2 * 1500)
+
+
+def test_lkj_constant_matches_the_exact_ones() -> None:
+    for row in load("lkj")["rows"]:
+        ours = correlation_block.log_constant(CorrelationLaw(row["eta"]), row["N"])
+        assert ours == pytest.approx(-row["log_norm"], abs=1e-9)
