@@ -1,0 +1,1 @@
+"""The pictures of the page, each one an SVG of its own."""
