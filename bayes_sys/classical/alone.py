@@ -154,7 +154,7 @@ def heteroskedasticity(alone: Alone) -> tuple[float, float]:
     .. [1] Koenker (1981), A note on studentizing a test for heteroscedasticity, Journal of Econometrics 17,
        107-112.
     """
-    squares = alone.residuals**2
+    squares = alone.residuals**2 / alone.variance
     around_mean = squares - squares.mean()
     design = alone.design if alone.has_intercept else np.column_stack([np.ones(len(squares)), alone.design])
     q, _ = np.linalg.qr(design)

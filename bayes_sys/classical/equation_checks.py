@@ -56,8 +56,11 @@ def equation_checks(system: System, index: int) -> Iterator[Check]:
     yield _periods(equation, system.n_periods)
     alone = fit_alone(equation.design, response, has_intercept=equation.has_intercept)
     if alone is None:
+        if len(equation.regressors) < system.n_periods:
+            yield _cannot_tell_apart(equation)
         return
-    yield from _collinearity(equation, alone)
+    if equation.regressors:
+        yield from _collinearity(equation, alone)
     exact = _exact_fit(equation, alone, response)
     yield exact
     if exact.verdict != FINE:
@@ -66,7 +69,8 @@ def equation_checks(system: System, index: int) -> Iterator[Check]:
     yield _breusch_godfrey(equation, alone, system.periods)
     if len(equation.regressors) > equation.has_intercept:
         yield _heteroskedasticity(equation, alone)
-    yield from _influence(equation, alone, system.periods)
+    if equation.regressors:
+        yield from _influence(equation, alone, system.periods)
 
 
 def _periods(equation: Equation, n_periods: int) -> Check:
@@ -89,6 +93,14 @@ def _periods(equation: Equation, n_periods: int) -> Check:
         verdict = FINE
         then = ": enough to estimate each of them."
     return Check("periods", equation.name, figure, PERIODS_PER_COEFFICIENT, verdict, have + then)
+
+
+def _cannot_tell_apart(equation: Equation) -> Check:
+    sentence = (
+        "One regressor is an exact combination of the others (the intercept counts as one), so the data "
+        "cannot tell their effects apart; only the prior does. Drop one."
+    )
+    return Check("condition_number", equation.name, None, CONDITION, WARNING, sentence)
 
 
 def _collinearity(equation: Equation, alone: Alone) -> Iterator[Check]:

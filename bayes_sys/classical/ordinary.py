@@ -63,10 +63,13 @@ def _undetermined_reason(system: System, undetermined: list[int]) -> dict[str, s
     if not undetermined:
         return {}
     named = ", ".join(f"“{system.names[i]}”" for i in undetermined)
+    several = len(undetermined) > 1
     few = all(len(system.equations[i].regressors) >= system.n_periods for i in undetermined)
+    have = "have" if several else "has"
     because = (
-        f"has as many coefficients as its {system.n_periods} periods, or more"
+        f"{have} no more periods ({system.n_periods}) than coefficients"
         if few
-        else "has regressors that its data cannot tell apart"
+        else f"{have} regressors that the data cannot tell apart"
     )
-    return {"ols": f"Equation {named} {because}, so least squares has no answer there."}
+    who = "Equations" if several else "Equation"
+    return {"ols": f"{who} {named} {because}, so least squares has no answer there."}

@@ -214,7 +214,10 @@ def _by_chi_square(test: str, statistic: float, p: float) -> str:
 
 
 def _by_simulation(test: str, simulations: int, p: float) -> str:
-    return f"By the {test} test ({p_value(p)} from {simulations} simulated systems of this very design, Gaussian errors)"
+    return (
+        f"By the {test} test ({p_value(p)} from {simulations} simulated systems of this very design with "
+        "Gaussian errors)"
+    )
 
 
 def _shared(name: str, p: float, how: str) -> Check:

@@ -160,6 +160,34 @@ def test_a_collinear_regressor_is_named():
     assert checks["condition_number", "a"].verdict == "note"
 
 
+def test_an_exact_combination_of_regressors_is_a_warning():
+    rng = np.random.default_rng(15)
+    x = rng.normal(size=(20, 2))
+    design = np.column_stack([np.ones(20), x, 1.0 + x[:, 0] - x[:, 1]])
+    checks = checks_of(make_system([design, x], rng.normal(size=(20, 2))))
+    assert checks["condition_number", "a"].verdict == "warning"
+    assert checks["condition_number", "a"].figure is None
+    assert "cannot tell apart" in checks["likelihood_maximum", ""].sentence
+
+
+@pytest.mark.parametrize("unit", [1e-150, 1e150])
+def test_units_of_the_response_do_not_change_the_examination(unit):
+    system = system_of(28, (3, 3), 30)
+    other = make_system([e.design for e in system.equations], system.responses * unit)
+    found = checks_of(other, simulations=200)
+    for key, check in checks_of(system, simulations=200).items():
+        assert found[key].verdict == check.verdict
+        assert found[key].figure == pytest.approx(check.figure, rel=1e-6)
+
+
+def test_an_equation_without_any_regressor_is_examined_too():
+    rng = np.random.default_rng(29)
+    design = np.column_stack([np.ones(20), rng.normal(size=20)])
+    checks = checks_of(make_system([np.empty((20, 0)), design], rng.normal(size=(20, 2))), simulations=200)
+    assert checks["breusch_godfrey", "a"].figure is not None
+    assert checks["likelihood_maximum", ""].verdict == "fine"
+
+
 def test_a_large_level_is_noted_but_not_held_against_the_slopes():
     years = np.arange(2004.0, 2024.0)
     system = make_system(
