@@ -93,7 +93,11 @@ def _check_plan(study: Study, plan: EquationPlan) -> None:
             check_regressor_name(regressor.name)
     except PydanticCustomError as error:
         context = error.context or {}
-        raise StudyError(context["what"], where=study.at(plan.regressors_key), mend=context["mend"]) from None
+        mend = context["mend"]
+        if "dot" in context["what"]:
+            # Only a name written with {equation} gets here; a name of its own is the same for all.
+            mend = 'Give it a name of its own, such as { name = "heat", column = "{equation}_heat" }.'
+        raise StudyError(context["what"], where=study.at(plan.regressors_key), mend=mend) from None
     for i, regressor in enumerate(plan.regressors):
         if regressor.column == plan.response:
             raise StudyError(

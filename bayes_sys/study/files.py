@@ -145,11 +145,13 @@ def _read_csv(path: Path, options: CsvOptions) -> pd.DataFrame:
     import pyarrow as pa
     from pyarrow import csv as arrow_csv
 
-    names = _csv_header(path, options)
+    names, n_blank = _csv_header(path, options)
     try:
         table = arrow_csv.read_csv(
             path,
-            read_options=arrow_csv.ReadOptions(column_names=names, skip_rows_after_names=1),
+            read_options=arrow_csv.ReadOptions(
+                column_names=names, skip_rows=n_blank, skip_rows_after_names=1
+            ),
             parse_options=arrow_csv.ParseOptions(
                 delimiter=options.separator, newlines_in_values=_quotes_a_newline(path)
             ),
@@ -163,10 +165,15 @@ def _read_csv(path: Path, options: CsvOptions) -> pd.DataFrame:
     return frame
 
 
-def _csv_header(path: Path, options: CsvOptions) -> list[str]:
+def _csv_header(path: Path, options: CsvOptions) -> tuple[list[str], int]:
+    """Return the names in the header, and the number of blank lines above it."""
+    n_blank, names = 0, list[str]()
     try:
         with path.open(encoding="utf-8-sig", newline="") as stream:
-            names = next((r for r in csv.reader(stream, delimiter=options.separator) if r), [])
+            for names in csv.reader(stream, delimiter=options.separator):
+                if names:
+                    break
+                n_blank += 1
     except UnicodeDecodeError:
         raise _not_utf8(path) from None
     except csv.Error as error:
@@ -178,7 +185,7 @@ def _csv_header(path: Path, options: CsvOptions) -> list[str]:
         raise TableError("the header line is empty.", where=f"{path.name}, line 1")
     names = [n or f"column {i + 1}" for i, n in enumerate(names)]
     _check_header(names, path.name)
-    return names
+    return names, n_blank
 
 
 def _refuse_one_column(header: str, path: Path, options: CsvOptions) -> None:
@@ -271,8 +278,12 @@ def _read_xlsx(path: Path, sheet: str | None) -> tuple[pd.DataFrame, tuple[int, 
             raise TableError(
                 f"there is no sheet “{sheet}”.", where=path.name, mend=nearest(sheet, book.sheet_names)
             )
-        cells = book.parse(
-            sheet if sheet is not None else 0, header=None, dtype=object, keep_default_na=False
+        cells = pd.read_excel(
+            book,
+            sheet_name=sheet if sheet is not None else 0,
+            header=None,
+            dtype=object,
+            keep_default_na=False,
         )
     cells = cells.astype(object).where(~cells.isin([""]), None)
     if cells.empty:

@@ -153,7 +153,8 @@ def _syntax_error(error: tomllib.TOMLDecodeError, text: str, path: Path) -> Stud
     what, place = (what, place.rstrip(")")) if what else (message, "")
     where = f"{path.name}, {place}" if place else path.name
     first = text.lstrip("\ufeff").split("\n", 1)[0]
-    looks_like_data = path.suffix.lower() in (".csv", ".txt", ".tsv") or first.count(",") > 2
+    plain = not any(sign in first for sign in "=[#") and any(sign in first for sign in ",;\t")
+    looks_like_data = plain or path.suffix.lower() in (".csv", ".parquet", ".xlsx")
     mend = (
         "This looks like a data file: name the study file instead."
         if looks_like_data
