@@ -139,6 +139,12 @@ def test_the_point_of_an_intercept_keeps_to_the_regressors_its_equation_has(syst
     assert found["St. John.intercept"].at == {"log_tariff": 2.0}
 
 
+def test_a_line_that_names_no_point_leaves_the_point_alone(system: System) -> None:
+    more = "[coefficients.of.intercept]\nat = { heat = 30.0 }\n[coefficients.in.alder]\nscale = 2.0"
+    found = said(card(NORMAL, more=more), system)
+    assert found["alder.intercept"] == Statement("normal", {"mean": 0.0, "scale": 2.0}, {"heat": 30.0})
+
+
 def test_the_point_of_one_intercept_replaces_the_general_one_as_a_whole(system: System) -> None:
     more = (
         "[coefficients.of.intercept]\nat = { log_tariff = 2.0, heat = 30.0 }\n"

@@ -50,6 +50,10 @@ def test_constants_and_trends_have_no_spread_however_large_their_level(values: A
     assert spread(values, np.arange(9.0)) == 0.0
 
 
+def test_a_trend_that_was_summed_up_step_by_step_has_no_spread_in_spite_of_rounding() -> None:
+    assert spread(np.full(2000, 0.1).cumsum(), np.arange(2000.0)) == 0.0
+
+
 def test_a_constant_has_no_deviation_in_spite_of_rounding() -> None:
     assert plain_deviation(np.full(7, 0.1) * 3.0) == 0.0
     assert plain_deviation(np.array([5.0])) == 0.0
