@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+_LARGEST = 10**15
 _EPOCH = np.datetime64("1970-01-01")
 _EPOCH_DAY = dt.date(1970, 1, 1).toordinal()
 _INTEGER = re.compile(r"[+-]?\d{1,15}(\.0+)?")
@@ -59,7 +60,7 @@ def read(value: object) -> Written:
         raise PeriodFault(f"found {value}, expected a period.", _WANTED)
     if isinstance(value, (int, np.integer, float, np.floating)):
         number: Any = value
-        if not abs(number) < 10**15 or number != int(number):
+        if not abs(number) < _LARGEST or number != int(number):
             raise PeriodFault(f"found {value}, expected a period.", _WANTED)
         return Written("a whole number", int(value))
     if isinstance(value, np.datetime64):
@@ -107,6 +108,19 @@ def _months(form: str, year: int, month: int, length: int, number: int, text: st
     return Written(form, number, dt.date(year, month, 1), last)
 
 
+def plain_numbers(values: list[object]) -> NDArray[np.int64] | None:
+    """Return values that are all whole numbers, or text of digits, as numbers; else None.
+
+    The quick way for long series: `read` looks at one value at a time.
+    """
+    if all(type(v) is int for v in values) or all(isinstance(v, np.integer) for v in values):
+        numbers = np.array(values, dtype=object)
+        return numbers.astype(np.int64) if all(abs(v) < _LARGEST for v in values) else None  # type: ignore[arg-type]
+    if all(type(v) is str and v.isascii() and v.isdigit() and len(v) <= 15 for v in values):
+        return np.array([int(v) for v in values], dtype=np.int64)  # type: ignore[call-overload]
+    return None
+
+
 def recognise(written: list[Written]) -> tuple[str, NDArray[np.int64], int]:
     """Return the kind of distinct periods of one form, their positions, and the common step.
 
@@ -116,12 +130,17 @@ def recognise(written: list[Written]) -> tuple[str, NDArray[np.int64], int]:
     form = written[0].form
     numbers = np.array([w.number for w in written], dtype=np.int64)
     if form == "a whole number":
-        _refuse_joined_dates(numbers)
-        years = bool(np.all((numbers >= 1500) & (numbers <= 2200)))
-        return ("year" if years else "integer"), numbers, _step(numbers)
+        return recognise_numbers(numbers)
     if form in ("a quarter", "a month"):
         return form.removeprefix("a "), numbers, _step(numbers)
     return _recognise_dates([w.first for w in written if w.first is not None], numbers)
+
+
+def recognise_numbers(numbers: NDArray[np.int64]) -> tuple[str, NDArray[np.int64], int]:
+    """Return what `recognise` returns, for whole numbers: years where all lie between 1500 and 2200."""
+    _refuse_joined_dates(numbers)
+    years = bool(np.all((numbers >= 1500) & (numbers <= 2200)))
+    return ("year" if years else "integer"), numbers, _step(numbers)
 
 
 def _recognise_dates(dates: list[dt.date], days: NDArray[np.int64]) -> tuple[str, NDArray[np.int64], int]:

@@ -141,9 +141,13 @@ def find_periods(values: Iterable[object], name: str = "period") -> tuple[Period
         If a value is no period, if kinds are mixed, or if the values are no periods but, say, record numbers.
     """
     listed = list(values)
-    written = [_read(v, i) for i, v in enumerate(listed)]
-    _check_one_form(written, listed)
-    kind, positions, step = calendars.recognise(written)
+    numbers = calendars.plain_numbers(listed)
+    if numbers is not None:
+        kind, positions, step = calendars.recognise_numbers(numbers)
+    else:
+        written = [_read(v, i) for i, v in enumerate(listed)]
+        _check_one_form(written, listed)
+        kind, positions, step = calendars.recognise(written)
     anchor = int(positions.min()) % step
     ordinals = (positions - anchor) // step
     first, last = int(ordinals.min()), int(ordinals.max())
