@@ -7,6 +7,7 @@ hash of every source the density is made of: a changed source has another folder
 
 from __future__ import annotations
 
+import ctypes
 import hashlib
 import importlib.util
 import os
@@ -19,9 +20,13 @@ from types import ModuleType
 from typing import Any
 
 import numba
+import numpy as np
+from numpy.typing import NDArray
 
 from bayes_sys.model import density, kernels
 from bayes_sys.model.blocks import coefficients, correlation, errors, scales, spreads, whitening
+
+Array = NDArray[np.float64]
 
 SOURCES = (density, kernels, coefficients, correlation, errors, scales, spreads, whitening)
 
@@ -70,6 +75,22 @@ def entry_points() -> EntryPoints:
     """Return the callbacks, compiled now or read from the cache on disk."""
     module = _import(_entry_file())
     return EntryPoints(module.density.address, module.expand.address, module)
+
+
+def value_and_gradient(point: Array, data: Array) -> tuple[float, Array]:
+    """Return the compiled log density, up to a constant, and its gradient at one unconstrained vector.
+
+    Parameters
+    ----------
+    point : array of float, shape (n_dim,)
+    data : array of float
+        ``density.Packed.data``.
+    """
+    doubles = ctypes.POINTER(ctypes.c_double)
+    point, gradient, value = np.ascontiguousarray(point, dtype=float), np.empty(len(point)), np.empty(1)
+    arguments = [array.ctypes.data_as(doubles) for array in (point, gradient, value)]
+    entry_points().keep.density.ctypes(len(point), *arguments, data.ctypes.data)
+    return float(value[0]), gradient
 
 
 def is_compiled() -> bool:

@@ -16,9 +16,13 @@ from numpy.typing import NDArray
 Array = NDArray[np.float64]
 
 
+# sums may be reordered, so that loops use vector instructions; nan and inf keep their meaning
+FAST_MATH = {"reassoc", "contract", "arcp", "nsz"}
+
+
 def kernel[F: Callable[..., Any]](function: F) -> F:
     """Mark a function as part of the compiled density (NumPy's division rules: inf and nan, no exception)."""
-    return cast(F, njit(error_model="numpy")(function))
+    return cast(F, njit(error_model="numpy", fastmath=FAST_MATH)(function))
 
 
 @kernel
@@ -26,14 +30,33 @@ def lower_inverse(lower: Array, inverse: Array) -> None:
     """Write the inverse of a lower-triangular matrix, shape (n, n), into ``inverse`` (zeros above)."""
     n = lower.shape[0]
     for i in range(n):
-        inverse[i, i] = 1.0 / lower[i, i]
-        for j in range(i + 1, n):
+        for j in range(n):
             inverse[i, j] = 0.0
+        for k in range(i):  # whole rows at a time: they lie together in memory
+            factor = lower[i, k]
+            for j in range(k + 1):
+                inverse[i, j] -= factor * inverse[k, j]
+        diagonal = 1.0 / lower[i, i]
         for j in range(i):
-            total = 0.0
-            for k in range(j, i):
-                total += lower[i, k] * inverse[k, j]
-            inverse[i, j] = -total * inverse[i, i]
+            inverse[i, j] *= diagonal
+        inverse[i, i] = diagonal
+
+
+@kernel
+def own_square(root: Array, out: Array) -> None:
+    """Write ``root' root`` of a lower-triangular matrix, shape (n, n)."""
+    n = root.shape[0]
+    for i in range(n):
+        for j in range(n):
+            out[i, j] = 0.0
+    for m in range(n):
+        for i in range(m + 1):
+            factor = root[m, i]
+            for j in range(i + 1):
+                out[i, j] += factor * root[m, j]
+    for i in range(n):
+        for j in range(i):
+            out[j, i] = out[i, j]
 
 
 @kernel

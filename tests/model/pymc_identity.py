@@ -14,7 +14,8 @@ from typing import Any
 import numpy as np
 from bayes_sys.model.blocks import coefficients as coefficient_block
 from bayes_sys.model.blocks import correlation as correlation_block
-from bayes_sys.model.density import covariance_roots, evaluate, pack
+from bayes_sys.model.compiled import value_and_gradient
+from bayes_sys.model.density import covariance_roots, pack
 from bayes_sys.model.factory import assemble
 from bayes_sys.prior.law import Prior
 from bayes_sys.system.system import System
@@ -157,8 +158,7 @@ class Identity:
 
     def compiled(self, u: Array) -> tuple[float, Array]:
         """Value and gradient of the compiled density."""
-        gradient = np.empty_like(u)
-        return evaluate(u, gradient, self.packed.data), gradient
+        return value_and_gradient(u, self.packed.data)
 
     def reference(self, u: Array, theta: Array) -> float:
         """The right-hand side of the identity."""

@@ -21,7 +21,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from bayes_sys.model.kernels import cholesky, kernel, lower_inverse
+from bayes_sys.model.kernels import cholesky, kernel, lower_inverse, own_square
 from bayes_sys.system.moments import Factor
 
 Array = NDArray[np.float64]
@@ -33,11 +33,8 @@ LIKELIHOOD = "likelihood"
 def information(w: Array, xx: Array, equation: Array, out: Array) -> None:
     """Write ``F_ab = Omega_e(a)e(b) x_a' x_b``, shape (K, K); ``w`` is the factor of Omega = W'W."""
     n = w.shape[0]
-    omega = np.zeros((n, n))
-    for k in range(n):
-        for i in range(k + 1):
-            for j in range(k + 1):
-                omega[i, j] += w[k, i] * w[k, j]
+    omega = np.empty((n, n))
+    own_square(w, omega)
     for a in range(xx.shape[0]):
         for b in range(xx.shape[0]):
             out[a, b] = omega[int(equation[a]), int(equation[b])] * xx[a, b]
@@ -196,13 +193,7 @@ def collapsed(
         return np.nan
     lower_inverse(lower, root)
     transpose_columns(h, scale, members, groups, rhs)
-    for i in range(p):
-        for j in range(i + 1):
-            total = 0.0
-            for m in range(i, p):
-                total += root[m, i] * root[m, j]
-            a[i, j] = total
-            a[j, i] = total
+    own_square(root, a)
     value = -log_root
     for i in range(p):
         total = 0.0
