@@ -7,6 +7,8 @@ from collections.abc import Sequence
 import numpy as np
 import pytest
 from helpers import make_system
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from bayes_sys.errors import DesignError
@@ -226,3 +228,41 @@ def test_the_checks_cost_the_same_for_many_periods() -> None:
     a, b, c, y = draws(200_000, 4)
     text = refusal(one_equation({"a": a, "b": b, "c": c, "total": a + b + c}, y))
     assert "“total” is an exact combination of “a”, “b” and “c”" in text
+
+
+@st.composite
+def independent_columns(draw: st.DrawFn) -> tuple[dict[str, Array], np.random.Generator]:
+    """Columns of very different levels and units, independent of each other; more periods than columns."""
+    rng = np.random.default_rng(draw(st.integers(0, 2**32 - 1)))
+    n_columns = draw(st.integers(3, 6))
+    n_periods = draw(st.integers(n_columns + 3, 40))
+    levels = rng.choice([0.0, 1.0, 2000.0, 1e6], n_columns)
+    units = 10.0 ** rng.integers(-2, 4, n_columns)
+    values = levels + units * rng.standard_normal((n_periods, n_columns))
+    return {f"x{k}": values[:, k] for k in range(n_columns)}, rng
+
+
+@settings(max_examples=100, deadline=None)
+@given(independent_columns(), st.booleans())
+def test_independent_regressors_always_pass(
+    drawn: tuple[dict[str, Array], np.random.Generator], intercept: bool
+) -> None:
+    columns, _ = drawn
+    check_design(one_equation(columns, intercept=intercept), source="x.csv")
+
+
+@settings(max_examples=100, deadline=None)
+@given(independent_columns(), st.integers(1, 3))
+def test_a_planted_combination_is_always_found_with_exactly_its_parts(
+    drawn: tuple[dict[str, Array], np.random.Generator], n_parts: int
+) -> None:
+    columns, rng = drawn
+    parts = sorted(rng.choice(sorted(columns), size=n_parts, replace=False))
+    spreads = [np.std(columns[p]) for p in parts]
+    # Weights of one to three in units of spread, so that no part vanishes beside the others.
+    weights = rng.uniform(1.0, 3.0, n_parts) * rng.choice([-1.0, 1.0], n_parts) / spreads
+    planted = sum(w * columns[p] for w, p in zip(weights, parts, strict=True))
+    text = refusal(one_equation({**columns, "planted": planted}))
+    assert "“planted” is an exact combination" in text
+    assert names_all(text, parts)
+    assert not any(f"“{other}”" in text for other in columns if other not in parts)
