@@ -159,7 +159,8 @@ def _recognise_dates(dates: list[dt.date], days: NDArray[np.int64]) -> tuple[str
 
 
 def _step(positions: NDArray[np.int64]) -> int:
-    return max(1, int(np.gcd.reduce(np.diff(np.unique(positions)))) if len(positions) > 1 else 1)
+    # Equal neighbours differ by 0, which leaves a common divisor as it is.
+    return max(1, int(np.gcd.reduce(np.diff(np.sort(positions)))) if len(positions) > 1 else 1)
 
 
 def _refuse_joined_dates(numbers: NDArray[np.int64]) -> None:

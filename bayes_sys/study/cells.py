@@ -60,14 +60,15 @@ def _from_text(table: RawTable, column: str, series: pd.Series[Any]) -> NDArray[
     import pyarrow.compute as pc
 
     options = table.options
-    text: Any = pa.chunked_array(pa.array(series, type=pa.string(), from_pandas=True))
+    kind = pa.large_string()
+    text: Any = pa.array(series, type=kind, from_pandas=True)
+    text = text if isinstance(text, pa.ChunkedArray) else pa.chunked_array([text])
     text = pc.utf8_trim_whitespace(text)
-    missing = pc.is_in(text, value_set=pa.array([m.strip() for m in options.missing], type=pa.string()))
-    text = pc.if_else(missing, pa.scalar(None, pa.string()), text)
+    missing = pc.is_in(text, value_set=pa.array([m.strip() for m in options.missing], type=kind))
+    text = pc.if_else(missing, pa.scalar(None, kind), text)
     if options.decimal == ",":
         # A point would be a thousands mark here: refuse it instead of reading 1.234 as 1.234.
-        text = pc.if_else(pc.match_substring(text, "."), pc.binary_join_element_wise(text, "?", ""), text)
-        text = pc.replace_substring(text, ",", ".")
+        text = pc.replace_substring(pc.replace_substring(text, ".", "?"), ",", ".")
     try:
         values = pc.cast(text, pa.float64())
         return np.asarray(values.to_numpy(zero_copy_only=False), dtype=np.float64)

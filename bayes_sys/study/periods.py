@@ -81,7 +81,10 @@ class Periods:
     def between(self, first: int, last: int) -> Periods:
         """Return every period from one ordinal to another, both included."""
         ordinals = np.arange(first, last + 1, dtype=np.int64)
-        labels = tuple(self.label_of(int(o)) for o in ordinals)
+        if self.kind in ("integer", "year"):
+            labels = tuple(map(str, (self.anchor + self.step * ordinals).tolist()))
+        else:
+            labels = tuple(self.label_of(int(o)) for o in ordinals)
         return Periods(self.kind, ordinals, labels, self.name, self.step, self.anchor)
 
     def season_of(self, cycle: int, first: int) -> NDArray[np.int64]:
@@ -151,7 +154,8 @@ def find_periods(values: Iterable[object], name: str = "period") -> tuple[Period
     anchor = int(positions.min()) % step
     ordinals = (positions - anchor) // step
     first, last = int(ordinals.min()), int(ordinals.max())
-    _check_dense(len(np.unique(ordinals)), last - first + 1, name)
+    n_found = 1 + int(np.count_nonzero(np.diff(np.sort(ordinals))))
+    _check_dense(n_found, last - first + 1, name)
     seed = Periods(kind, np.empty(0, dtype=np.int64), (), name, step, anchor)
     return seed.between(first, last), ordinals
 

@@ -228,6 +228,8 @@ def _fill(store: Store, raw: RawTable, layout: _Layout) -> None:
     used = used_columns(store.study, layout.equations)
     part = raw.only(layout.rows)
     for column in raw.frame.columns:
+        if column == store.study.data.unit and column not in used:
+            continue
         try:
             values = numbers(part, column)
         except TableError:
@@ -295,12 +297,16 @@ def _frames(store: Store, layout: _Layout, plans: list[EquationPlan]) -> dict[st
     if store.study.data.is_wide:
         raw = {n: c.values[:, 0] for n, c in store.columns.items() if n in store.raw_names}
         common = pd.DataFrame(raw, index=index)
-    own_names = [n for n in store.columns if common is None or n not in store.raw_names]
+    names = [n for n in store.columns if common is None or n not in store.raw_names]
+    # One array (equations, columns, periods), so that each frame is a view of it: units may be very many.
+    block = np.empty((len(plans), len(names), store.n_grid))
+    for k, name in enumerate(names):
+        block[:, k, :] = store.columns[name].values[:, : len(plans)].T
     frames = {}
     for j, plan in enumerate(plans):
-        own = {n: store.columns[n].values[:, j] for n in own_names}
-        own |= {n: store.pool[n].values[:, 0] for n in _pooled(store, plan)}
-        frame = pd.DataFrame(own, index=index)
+        frame = pd.DataFrame(block[j].T, index=index, columns=names, copy=False)
+        for name in _pooled(store, plan):
+            frame[name] = store.pool[name].values[:, 0]
         frames[plan.name] = frame if common is None else pd.concat([common, frame], axis=1)
     return frames
 
