@@ -85,11 +85,10 @@ def _tree(
             pairs if pairs is not None else np.empty((*out["scales"].shape[:2], 0)),
         ),
     }
-    prior_variance = np.full_like(out["mean"], prior_sd**2)
     conditional = {
         "mean": ((*sample, "coefficient"), out["mean"]),
         "variance": ((*sample, "coefficient"), out["variance"]),
-        "prior_variance": ((*sample, "coefficient"), prior_variance),
+        "shrinkage": ((*sample, "coefficient"), out["variance"] / prior_sd**2),
     }
     k = system.n_coefficients
     constant = {

@@ -27,8 +27,12 @@ class Conditional:
 
     Parameters
     ----------
-    mean, variance, prior_variance : arrays of float, shape (n_draws, K)
-        ``prior_variance`` is that given the prior's scales, pooled means integrated out.
+    mean, variance : arrays of float, shape (n_draws, K)
+        Pooled means integrated out.
+    shrinkage : array of float, shape (n_draws, K)
+        ``V_kk / tau_k^2``: conditional over prior variance, both given the covariance, the prior's scales and,
+        where coefficients are pooled, the mean they share. For a pooled coefficient it is the pooling factor
+        (Gelman & Pardoe 2006, Technometrics 48, 241-251): 0, it keeps its own estimate, 1, the shared mean.
     draw : array of float, shape (n_draws, K)
         One exact draw per covariance draw.
     stated : array of float, shape (n_draws, K)
@@ -38,7 +42,7 @@ class Conditional:
 
     mean: Array
     variance: Array
-    prior_variance: Array
+    shrinkage: Array
     draw: Array
     stated: Array
     pooled_mean: Array
@@ -124,9 +128,10 @@ def _batch(
     mean = law.stated_mean + (columns @ theta[:, :, None])[:, :, 0]
     stated = mean + (columns @ noise[:, :, None])[:, :, 0]
     variance = ((half @ to_raw.T) ** 2).sum(axis=1)
-    prior_variance = ((transposed @ to_raw.T) ** 2).sum(axis=1)
     k = len(law.mean)
+    own = transposed[:, :k] @ to_raw.T  # without the columns of the pooled means
+    shrinkage = (np.linalg.solve(lower[:, :k, :k], own) ** 2).sum(axis=1) / (own**2).sum(axis=1)
     group_mean = np.array([g.mean for g in law.groups])
     group_scale = np.array([g.mean_scale for g in law.groups])
     pooled = group_mean + group_scale * (theta + noise)[:, k:]
-    return Conditional(mean @ to_raw.T, variance, prior_variance, stated @ to_raw.T, stated, pooled)
+    return Conditional(mean @ to_raw.T, variance, shrinkage, stated @ to_raw.T, stated, pooled)

@@ -73,24 +73,22 @@ def shrinkage(posterior: xr.DataTree) -> Array:
 
     The mean over the draws of the ratio of the coefficient's variance given the error covariance and the
     prior's scales to its prior variance given those scales: 0 where the data decide, 1 where the prior does.
+    For a pooled coefficient both are taken given the shared mean, so that 1 means: the shared mean decides.
 
     Parameters
     ----------
     posterior : DataTree
-        Variables ``variance`` and ``prior_variance`` of the group ``conditional``.
+        Variable ``shrinkage`` of the group ``conditional``.
 
     Returns
     -------
     array of float, shape (n_coefficients,)
-        NaN where the group is absent, or where the prior leaves a coefficient no room to move.
+        NaN where the group is absent.
     """
     if "conditional" not in posterior.children:
         return np.full(posterior["posterior"].sizes["coefficient"], np.nan)
-    variance = flat_draws(posterior, "variance", "conditional")
-    prior = flat_draws(posterior, "prior_variance", "conditional")
-    with np.errstate(invalid="ignore", divide="ignore"):
-        ratio = np.where(prior > 0, variance / prior, np.nan)
-    return ratio.mean(axis=0)
+    ratio: Array = flat_draws(posterior, "shrinkage", "conditional").mean(axis=0)
+    return ratio
 
 
 def scale_table(

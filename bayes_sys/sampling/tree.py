@@ -30,7 +30,7 @@ def posterior_tree(
 ) -> xr.DataTree:
     """Lay draws out in groups.
 
-    Groups: ``posterior``, ``conditional`` (mean, variance and prior variance of the coefficients given
+    Groups: ``posterior``, ``conditional`` (mean, variance and shrinkage of the coefficients given
     covariance and scales), ``sample_stats``, ``log_likelihood`` (joint over the equations, per period),
     ``log_prior`` (by block), ``observed_data``, ``constant_data``.
 
@@ -81,7 +81,7 @@ def _posterior(system: System, prior: Prior, draws: Draws) -> dict[str, Any]:
 
 def _conditional(draws: Draws) -> dict[str, Any]:
     law = draws.conditional
-    parts = {"mean": law.mean, "variance": law.variance, "prior_variance": law.prior_variance}
+    parts = {"mean": law.mean, "variance": law.variance, "shrinkage": law.shrinkage}
     return {name: ((CHAIN, DRAW, "coefficient"), _by_chain(draws, v)) for name, v in parts.items()}
 
 

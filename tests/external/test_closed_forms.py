@@ -6,9 +6,8 @@ import numpy as np
 import pytest
 from bayes_sys.model.blocks import correlation as correlation_block
 from bayes_sys.model.conditional import conditional_coefficients
-from bayes_sys.posterior.tables import coefficient_table
 from bayes_sys.prior.cards import build_card
-from bayes_sys.prior.law import CorrelationLaw
+from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
 from bayes_sys.prior.resolve import resolve
 from bayes_sys.sampling.engine import sample
 from helpers import make_system
@@ -50,18 +49,33 @@ def test_draws_of_the_coefficients_given_the_covariance_have_that_law() -> None:
 
 
 def test_shrinkage_is_the_conditional_variance_over_the_prior_variance() -> None:
-    # one draw of known covariance, repeated: E[V_kk / tau_k^2] must be the closed form's posterior variance
-    # over the square of the card's scale
     case, row = load("grun2"), fixed_covariance_row("grun2")
     system = reference_system(case)
-    posterior = sample(system, reference_card(case, system), draws=200, warmup=200, seed=2)
-    shape = posterior["conditional"]["variance"].shape
-    closed_form = np.square(list(row["post_sd"].values()))
-    posterior["conditional"]["variance"].values[:] = np.broadcast_to(closed_form, shape)
-    table = coefficient_table(posterior, system)
-    scales = np.concatenate(case["prior"]["beta_sd"])
-    np.testing.assert_allclose(table["shrinkage"], closed_form / scales**2, rtol=1e-12)
-    assert ((table["shrinkage"] > 0) & (table["shrinkage"] <= 1)).all()
+    prior = resolve(reference_card(case, system), system)
+    root = np.linalg.cholesky(np.outer(row["sd"], row["sd"]) * np.array(row["R"]))[None]
+    law = conditional_coefficients(
+        system.factor, prior, np.zeros(6), root, np.empty((1, 0)), np.random.default_rng(0)
+    )
+    closed_form = np.square(list(row["post_sd"].values())) / np.square(np.concatenate(case["prior"]["beta_sd"]))
+    np.testing.assert_allclose(law.shrinkage[0], closed_form, rtol=1e-9)
+    assert ((law.shrinkage > 0) & (law.shrinkage <= 1)).all()
+
+
+def test_shrinkage_of_a_pooled_coefficient_is_its_pooling_factor() -> None:
+    # one regressor, no intercept, independent errors of known size: (1 / tau^2) / (1 / tau^2 + x'x / sigma^2)
+    rng = np.random.default_rng(6)
+    designs = [rng.normal(size=(8, 1)) for _ in range(3)]
+    system = make_system(designs, rng.normal(size=(8, 3)), regressor_names=[["x"]] * 3)
+    group = np.zeros(3, dtype=int)
+    nan = np.full(3, np.nan)
+    law = CoefficientLaw(np.eye(3), nan, nan, group, (PooledGroup("x", 0.0, 5.0, 1.0),))
+    prior = Prior(law, ScaleLaw(("half_normal",) * 3, np.ones(3), np.zeros(3)), CorrelationLaw(2.0))
+    sigma, tau = np.array([0.5, 1.0, 2.0]), 0.3
+    result = conditional_coefficients(
+        system.factor, prior, np.zeros(3), np.diag(sigma)[None], np.array([[tau]]), np.random.default_rng(0)
+    )
+    information = np.array([float(x.T @ x) for x in [d[:, 0] for d in designs]]) / sigma**2
+    np.testing.assert_allclose(result.shrinkage[0], 1 / (1 + tau**2 * information), rtol=1e-12)
 
 
 def one_equation() -> tuple[np.ndarray, np.ndarray]:
