@@ -17,6 +17,27 @@ from bayes_sys.study.spec_base import show
 if TYPE_CHECKING:
     import pandas as pd
 
+# Marks that tables commonly use for “not observed” (common practice).
+_LIKE_MISSING = {
+    "-",
+    "--",
+    "–",
+    "—",
+    ".",
+    "..",
+    "...",
+    "…",
+    ":",
+    "*",
+    "?",
+    "x",
+    "n/a",
+    "na",
+    "#n/a",
+    "n.a.",
+    "nan",
+}
+_LIKE_MISSING |= {"none", "null", "nil", "missing", "unknown", "c", "s"}
 _NUMBER = re.compile(r"[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?")
 
 
@@ -128,7 +149,7 @@ def _cell_fault(table: RawTable, column: str, row: int, cell: object) -> TableEr
             mend = 'The study says decimal = ","; if the point is the decimal sign, take that out.'
         elif re.fullmatch(r"[+-]?\d{1,3}([ ,.'’]\d{3})+([.,]\d+)?", text):
             mend = "Write numbers without marks for thousands."
-        elif len(text) <= 8 and not any(c.isdigit() for c in text):
+        elif text.lower() in _LIKE_MISSING:
             mend += f' If “{text}” means “not observed”, add it to csv = {{ missing = ["", "{text}"] }}.'
     elif isinstance(cell, (dt.date, np.datetime64)):
         mend = "A date cannot be a regressor or a response."

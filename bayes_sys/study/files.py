@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 LARGEST_FILE = 2_000_000_000
-_SEPARATORS = {";": ";", "\t": "\\t", "|": "|", ",": ","}
+_SEPARATORS = {";": ";", "\t": "\\t", "|": "|", ",": ",", " ": " "}
 
 
 @dataclass(frozen=True)
@@ -67,7 +67,15 @@ def load_table(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
     TableError
         If the file is missing, of another kind, too large, damaged, empty, or its header is unusable.
     """
-    _check_file(path)
+    try:
+        _check_file(path)
+        return _load(path, options, sheet)
+    except OSError as error:
+        reason = error.strerror or "unknown reason"
+        raise TableError(f"the file cannot be read ({reason}).", where=str(path)[:200]) from None
+
+
+def _load(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
     suffix = path.suffix.lower()
     lines: tuple[int, ...] = ()
     if sheet is not None and suffix != ".xlsx":
@@ -105,10 +113,12 @@ def given_table(table: pd.DataFrame, options: CsvOptions) -> RawTable:
 def check_table(table: RawTable) -> RawTable:
     """Refuse a table without rows; return it otherwise."""
     if table.frame.empty:
-        raise TableError(
-            "the table has a header but no rows.", where=table.name, mend="Is this the right file?"
-        )
+        raise _no_rows(table.name)
     return table
+
+
+def _no_rows(name: str) -> TableError:
+    return TableError("the table has a header but no rows.", where=name, mend="Is this the right file?")
 
 
 def _check_file(path: Path) -> None:
@@ -132,13 +142,15 @@ def _check_file(path: Path) -> None:
 
 
 def _check_header(names: list[str], where: str) -> None:
+    seen: set[str] = set()
     for i, name in enumerate(names):
-        if name in names[:i]:
+        if name in seen:
             raise TableError(
                 f"two columns are called “{name}” (columns {names.index(name) + 1} and {i + 1}).",
                 where=where,
                 mend="Rename one.",
             )
+        seen.add(name)
 
 
 def _read_csv(path: Path, options: CsvOptions) -> pd.DataFrame:
@@ -167,6 +179,7 @@ def _read_csv(path: Path, options: CsvOptions) -> pd.DataFrame:
 
 def _csv_header(path: Path, options: CsvOptions) -> tuple[list[str], int]:
     """Return the names in the header, and the number of blank lines above it."""
+    _refuse_binary(path)
     n_blank, names = 0, list[str]()
     try:
         with path.open(encoding="utf-8-sig", newline="") as stream:
@@ -186,6 +199,19 @@ def _csv_header(path: Path, options: CsvOptions) -> tuple[list[str], int]:
     names = [n or f"column {i + 1}" for i, n in enumerate(names)]
     _check_header(names, path.name)
     return names, n_blank
+
+
+def _refuse_binary(path: Path) -> None:
+    with path.open("rb") as stream:
+        start = stream.read(4096)
+    if start.startswith(b"PK\x03\x04"):
+        raise TableError(
+            "this is no csv file but looks like xlsx.", where=path.name, mend="Rename it, or save it as csv."
+        )
+    if start.startswith((b"\xff\xfe", b"\xfe\xff")):
+        raise _not_utf8(path)
+    if b"\0" in start:
+        raise TableError("this is no text file.", where=path.name, mend="Save the table as csv in UTF-8.")
 
 
 def _refuse_one_column(header: str, path: Path, options: CsvOptions) -> None:
@@ -213,15 +239,20 @@ def _quotes_a_newline(path: Path) -> bool:
 def _csv_fault(path: Path, options: CsvOptions, n_names: int, error: Exception) -> TableError:
     if not _is_utf8(path):
         return _not_utf8(path)
+    n_rows = 0
     with path.open(encoding="utf-8-sig", newline="") as stream:
         reader = csv.reader(stream, delimiter=options.separator)
         for cells in reader:
+            n_rows += bool(cells)
             if cells and len(cells) != n_names:
+                found = "1 cell" if len(cells) == 1 else f"{len(cells)} cells"
                 return TableError(
-                    f"found {len(cells)} cells, expected {n_names} as in the header.",
+                    f"found {found}, expected {n_names} as in the header.",
                     where=f"{path.name}, line {reader.line_num}",
                     mend="Put cells that hold the separator in double quotes, or mend the line.",
                 )
+    if n_rows <= 1:
+        return _no_rows(path.name)
     return TableError(f"the file cannot be read as csv ({error}).", where=path.name)
 
 

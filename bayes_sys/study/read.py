@@ -109,6 +109,18 @@ def _build(content: dict[str, Any], *, source: Path | None, folder: Path, text: 
 
 
 def _read_bytes(path: Path) -> bytes:
+    try:
+        _check_path(path)
+        raw = path.read_bytes()
+    except OSError as error:
+        reason = error.strerror or "unknown reason"
+        raise StudyError(f"the file cannot be read ({reason}).", where=str(path)[:200]) from None
+    if not raw.strip():
+        raise StudyError("the file is empty.", where=str(path), mend="A study needs at least a [data] table.")
+    return raw
+
+
+def _check_path(path: Path) -> None:
     if not path.exists():
         raise StudyError("there is no such file.", where=str(path), mend=_similar(path))
     if path.is_dir():
@@ -121,13 +133,6 @@ def _read_bytes(path: Path) -> bytes:
             where=str(path),
             mend="Is this the data file? The study is the TOML file that names it.",
         )
-    try:
-        raw = path.read_bytes()
-    except OSError as error:
-        raise StudyError(f"the file cannot be read ({error.strerror}).", where=str(path)) from None
-    if not raw.strip():
-        raise StudyError("the file is empty.", where=str(path), mend="A study needs at least a [data] table.")
-    return raw
 
 
 def _similar(path: Path) -> str:

@@ -414,6 +414,11 @@ def test_a_missing_file_says_what_is_there_instead(tmp_path: Path) -> None:
         read_study(tmp_path / "nowhere" / "s.toml")
 
 
+def test_a_name_the_system_cannot_take_is_refused(tmp_path: Path) -> None:
+    with pytest.raises(StudyError, match="cannot be read"):
+        read_study(tmp_path / ("b" * 300))
+
+
 def test_a_folder_is_no_study(tmp_path: Path) -> None:
     (tmp_path / "bread.toml").write_text("", encoding="utf-8")
     with pytest.raises(StudyError, match=r"folder.*bread\.toml"):

@@ -287,6 +287,12 @@ def test_a_faulty_shared_table_is_refused(tmp_path: Path, text: str, said: str) 
     [
         ("", {}, ["bread.csv", "empty"]),
         ("year,town,bread,price\n", {}, ["no rows"]),
+        ("year,town,bread,price", {}, ["no rows"]),
+        (b"PK\x03\x04year,town", {}, ["looks like xlsx"]),
+        (b"year,town\x00\x01", {}, ["no text file"]),
+        ("year town bread price\n2001 a 1 2\n", {}, ['separator = " "']),
+        ("year|town|bread|price\n2001|a|1|2\n", {}, ['separator = "|"']),
+        ("year,town,bread,price\n2001,a,1,2\n2002\n", {}, ["line 3", "1 cell, expected 4"]),
         ("year;town;bread;price\n2001;a;1,5;2\n", {}, ["single column", 'separator = ";"']),
         ("year\ttown\tbread\n2001\ta\t1\n", {}, ['separator = "\\t"']),
         ("year,town,bread\n2001,a,1\n", {"data": {"csv": {"separator": ";"}}}, ['separator = ","']),
@@ -405,7 +411,12 @@ def test_missing_and_unknown_files_are_refused(tmp_path: Path) -> None:
     (tmp_path / "bread.csv").write_text("x", encoding="utf-8")
     (tmp_path / "bread.xls").write_text("x", encoding="utf-8")
     (tmp_path / "folder").mkdir()
-    for name, said in (("braed.csv", "bread.csv"), ("bread.xls", "ending in"), ("folder", "folder")):
+    for name, said in (
+        ("braed.csv", "bread.csv"),
+        ("b" * 300 + ".csv", "cannot be read"),
+        ("bread.xls", "ending in"),
+        ("folder", "folder"),
+    ):
         with pytest.raises(TableError, match=said):
             read_panel(study_of(tmp_path, data={"file": name}))
     with pytest.raises(StudyError, match="no data file"):
