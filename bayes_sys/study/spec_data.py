@@ -210,6 +210,10 @@ class Regressor(Part):
     @classmethod
     def _parse(cls, value: Any) -> Any:
         if isinstance(value, str):
+            # Checked here already, so that the message's path ends at the list's place, as the file has it.
+            if not value.strip():
+                raise fault("this text is empty.", mend="Write the name of a column.")
+            check_regressor_name(value)
             return {"name": value, "column": value}
         if isinstance(value, dict) and "name" in value and "column" not in value:
             return {**value, "column": value["name"]}
