@@ -98,9 +98,7 @@ def read_table(path: Path) -> pd.DataFrame:
         columns = pd.read_csv(path, nrows=0).columns
         labels = {name: str for name in NAMES if name in columns}
         empty = {name: [""] for name in columns if name not in labels}
-        return pd.read_csv(
-            path, dtype=labels, na_values=empty, keep_default_na=False, float_precision="round_trip"
-        )
+        return pd.read_csv(path, dtype=labels, na_values=empty, keep_default_na=False)
     except (OSError, ValueError) as error:
         raise RunFolderError(
             f"this table cannot be read ({error}).", where=str(path), mend="Run the study again."

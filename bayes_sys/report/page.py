@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from functools import cache
 from pathlib import Path
@@ -10,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 from bayes_sys import runs
 from bayes_sys.report.content import TABLES, RunContent
 from bayes_sys.report.grids import Grid, grid
-from bayes_sys.report.numbers import NOTHING, as_float, counted, fixed, number
+from bayes_sys.report.numbers import NOTHING, as_float, counted, fixed, listed
 from bayes_sys.report.pictures import (
     MAX_PANELS,
     coefficient_pictures,
@@ -120,9 +121,11 @@ def status(manifest: Mapping[str, Any]) -> str:
 def made(manifest: Mapping[str, Any]) -> str:
     """Return when and with what the page's run was made."""
     versions = manifest.get("versions") or {}
-    version = versions.get("bayes_sys") or versions.get("bayes-sys")
-    parts = [str(manifest.get("created") or "").replace("T", " "), f"bayes-sys {version}" if version else ""]
-    return " · ".join(part for part in parts if part)
+    version = str(versions.get("bayes_sys") or "")
+    created = re.sub(r"(\d)T(\d\d:\d\d)(:\d\d)?\+00:00$", r"\1 \2 UTC", str(manifest.get("created") or ""))
+    # a checkout that was never installed has no version to show
+    program = f"bayes-sys {version}" if version[:1].isdigit() else "bayes-sys"
+    return " · ".join(part for part in (created, program) if part)
 
 
 def scope(content: RunContent) -> str:
@@ -139,8 +142,8 @@ def scope(content: RunContent) -> str:
     return " · ".join(parts)
 
 
-def gate_rows(gate: Mapping[str, Any]) -> list[tuple[str, str, str, str]]:
-    """Return what the gate looked at: figure, found, wanted, verdict."""
+def gate_rows(gate: Mapping[str, Any]) -> list[tuple[str, str, str, str, str]]:
+    """Return what the gate looked at: figure, where it is worst, found, wanted, verdict."""
     if not gate:
         return []
     limits = gate.get("limits") or {}
@@ -158,8 +161,8 @@ def gate_rows(gate: Mapping[str, Any]) -> list[tuple[str, str, str, str]]:
         good = found <= limit if sense == "at most" else found >= limit
         verdict = "passed" if good else "failed" if found == found and limit == limit else "not known"
         asked = f"{sense} {fixed(limit, limit_decimals)}" if limit == limit else NOTHING
-        where = f" ({gate[worst]})" if worst and gate.get(worst) else ""
-        rows.append((label, fixed(found, decimals) + where, asked, verdict))
+        where = str(gate.get(worst) or "") if worst else ""
+        rows.append((label, where, fixed(found, decimals), asked, verdict))
     return rows
 
 
@@ -187,19 +190,21 @@ def explained(content: RunContent) -> dict[str, str]:
 
 
 def examination(content: RunContent) -> dict[str, list[dict[str, str]]]:
-    """Return the verdicts before sampling, the gravest first."""
-    found: dict[str, list[dict[str, str]]] = {verdict: [] for verdict in VERDICTS}
+    """Return the verdicts before sampling; one sentence for all equations of which it is true."""
+    found: dict[str, dict[tuple[str, str], list[str]]] = {verdict: {} for verdict in VERDICTS}
     for check in content.examination:
         verdict = str(check.get("verdict") or "")
-        row = {
-            "name": str(check.get("name") or "").replace("_", " "),
-            "equation": str(check.get("equation") or ""),
-            "figure": number(check.get("figure")),
-            "threshold": number(check.get("threshold")),
-            "sentence": str(check.get("sentence") or ""),
-        }
-        found[verdict if verdict in VERDICTS else "note"].append(row)
-    return found
+        key = (str(check.get("name") or ""), str(check.get("sentence") or ""))
+        equations = found[verdict if verdict in VERDICTS else "note"].setdefault(key, [])
+        if check.get("equation"):
+            equations.append(str(check["equation"]))
+    return {
+        verdict: [
+            {"equation": listed(equations, 30) if equations else "", "sentence": sentence}
+            for (_, sentence), equations in checks.items()
+        ]
+        for verdict, checks in found.items()
+    }
 
 
 def surprises(content: RunContent) -> dict[str, Any]:

@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
 Array = NDArray[np.float64]
 
-POINTS = 9000
+POINTS = 7500
 """Points drawn over all series together; MIN_POINTS to MAX_POINTS of each."""
 MIN_POINTS, MAX_POINTS = 120, 400
 MAX_PANELS = 40

@@ -82,9 +82,11 @@ def _sign_of_one(name: str, rows: pd.DataFrame) -> str:
         return f"{name} is {sign} in {row['equation']} ({number(row['q5'])} to {number(row['q95'])})"
     if not up and not down:
         return f"{name} has no clear sign in any of {n} equations"
+    means = f"(means {number(rows['mean'].min())} to {number(rows['mean'].max())})"
+    if n in (up, down):
+        return f"{name} is clearly {'positive' if up else 'negative'} in all {n} equations {means}"
     parts = [f"{sign} in {k}" for k, sign in ((up, "positive"), (down, "negative")) if k]
-    low, high = number(rows["mean"].min()), number(rows["mean"].max())
-    return f"{name} is clearly {' and '.join(parts)} of {n} equations (means {low} to {high})"
+    return f"{name} is clearly {' and '.join(parts)} of {n} equations {means}"
 
 
 def who_decides(coefficients: pd.DataFrame) -> str:
@@ -94,10 +96,12 @@ def who_decides(coefficients: pd.DataFrame) -> str:
         return ""
     data = known[known["shrinkage"] <= DATA_DECIDE]
     prior = known[known["shrinkage"] >= PRIOR_DECIDES].sort_values("shrinkage", ascending=False)
-    start = (
-        f"The data decide {len(data)} of {counted(len(known), 'coefficient')} (there the prior’s share is at "
-        f"most {percent(DATA_DECIDE)})"
-    )
+    limit = f"(there the prior’s share is at most {percent(DATA_DECIDE)})"
+    if len(data) == len(known):
+        most = float(known["shrinkage"].max())
+        share = "below 1%" if most < 0.01 else f"at most {percent(most)}"
+        return f"The data, not the prior, decide all coefficients: the prior’s share is {share}."
+    start = f"The data decide {len(data)} of {counted(len(known), 'coefficient')} {limit}"
     if prior.empty:
         return f"{start}; nowhere does the prior have the larger say."
     names = [f"{e}.{r}" for e, r in zip(prior["equation"], prior["regressor"], strict=True)]
@@ -118,7 +122,7 @@ def against_classics(coefficients: pd.DataFrame, content: RunContent) -> str:
             "No coefficient lies more than one classical standard error from the classical joint estimate "
             f"(FGLS); the furthest is {name}, by {fixed(abs(far['moved_se']), 1)}."
         )
-    lie = "coefficient lies" if count == 1 else "coefficients lie"
+    lie = "coefficients lies" if count == 1 else "coefficients lie"
     return (
         f"{count} of {len(coefficients)} {lie} more than one classical standard error from the classical "
         f"joint estimate (FGLS); the furthest is {name}, by {fixed(abs(far['moved_se']), 1)}."

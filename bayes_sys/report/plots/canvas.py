@@ -109,7 +109,17 @@ def compact(svg: str) -> str:
     svg = svg[svg.index("<svg") :]
     svg = re.sub(r"<!--.*?-->", "", svg, flags=re.DOTALL)
     svg = re.sub(r"<[a-z][^>]*>", _compact_tag, svg)
-    return re.sub(r">\s+<", "><", svg)
+    svg = re.sub(r">\s+<", "><", svg)
+    return re.sub(r"(<use [^>]*/>){2,}", _share_style, svg)
+
+
+def _share_style(found: re.Match[str]) -> str:
+    """Say once what a run of markers looks like."""
+    styles = set(re.findall(r' style="[^"]*"', found.group()))
+    if len(styles) != 1:
+        return found.group()
+    (style,) = styles
+    return f"<g{style}>{found.group().replace(style, '')}</g>"
 
 
 def _compact_tag(found: re.Match[str]) -> str:

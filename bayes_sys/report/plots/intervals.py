@@ -27,11 +27,11 @@ if TYPE_CHECKING:
 
 Array = NDArray[np.float64]
 
-WIDTH = 430
-ROW = 34
+WIDTH = 400
+ROW, DENSE_ROW, DENSE_FROM = 34, 25, 13
 TOP, BOTTOM = 22, 26
-SHARE_WIDTH = 84
-NAME_LETTERS = 22
+SHARE_WIDTH = 80
+NAME_LETTERS = 20
 Z_TAIL = 1.645
 """A normal's 90% interval is its mean and so many standard deviations on either side."""
 
@@ -86,14 +86,15 @@ def interval_picture(title: str, rows: Rows, *, logarithmic: bool = False, origi
         Whether nought is marked.
     """
     count = len(rows.names)
-    height = TOP + BOTTOM + ROW * count
+    row = ROW if count < DENSE_FROM else DENSE_ROW
+    height = TOP + BOTTOM + row * count
     has_share = bool(np.isfinite(rows.share).any())
     letters = max(len(cut(name, NAME_LETTERS)) for name in rows.names)
     gutter = 12 + 6.3 * letters
 
     def draw(figure: Figure) -> None:
         right = SHARE_WIDTH if has_share else 12
-        axes = axes_at(figure, gutter, TOP, WIDTH - gutter - right, ROW * count)
+        axes = axes_at(figure, gutter, TOP, WIDTH - gutter - right, row * count)
         low, high = _window(rows, logarithmic)
         if logarithmic:
             axes.set_xscale("log")
@@ -109,7 +110,7 @@ def interval_picture(title: str, rows: Rows, *, logarithmic: bool = False, origi
             rows.mean, at, "o", markersize=7, color="white", markeredgecolor=BLUE, markeredgewidth=2, zorder=5
         )
         if has_share:
-            _shares(figure, rows, height)
+            _shares(figure, rows, row)
 
     return picture(WIDTH, height, draw, _in_words(title, rows))
 
@@ -150,7 +151,7 @@ def _prior(axes: Axes, rows: Rows) -> None:
     reach = Z_TAIL * rows.prior_sd
     for at, (centre, size) in enumerate(zip(rows.prior_mean, reach, strict=True)):
         if np.isfinite(centre) and np.isfinite(size) and size > 0:
-            axes.barh(at, 2 * size, left=centre - size, height=0.9, color="#f1ede2", zorder=0)
+            axes.barh(at, 2 * size, left=centre - size, height=0.9, color="#f5f2e9", zorder=0)
 
 
 def _marks(
@@ -179,10 +180,10 @@ def _marks(
         )
 
 
-def _shares(figure: Figure, rows: Rows, height: int) -> None:
+def _shares(figure: Figure, rows: Rows, row: int) -> None:
     """Draw how far the prior decides, a bar a row."""
     count = len(rows.names)
-    axes = axes_at(figure, WIDTH - SHARE_WIDTH + 14, TOP, 32, ROW * count)
+    axes = axes_at(figure, WIDTH - SHARE_WIDTH + 14, TOP, 32, row * count)
     axes.set_axis_off()
     axes.set_xlim(0, 1)
     axes.set_ylim(count - 0.5, -0.5)
@@ -193,7 +194,7 @@ def _shares(figure: Figure, rows: Rows, height: int) -> None:
         axes.text(1.12, float(at), percent(rows.share[at]), va="center", ha="left", fontsize=9.5, color=INK)
     figure.text(
         (WIDTH - 4) / WIDTH,
-        1 - 12 / height,
+        1 - 12 / (TOP + BOTTOM + row * count),
         "prior’s share",
         ha="right",
         va="center",

@@ -61,7 +61,7 @@ def matrix_picture(names: tuple[str, ...], table: pd.DataFrame) -> Picture:
         axes.set_ylim(count, 0)
         _label(axes, names, letters)
         rows, columns, values = _cells(names, table)
-        _grounds(axes, rows, columns, values)
+        _grounds(axes, rows, columns, values, len(names))
         _bars(axes, rows, columns, values, len(names))
         if len(names) <= TIGHT:
             _numbers(axes, rows, columns, values, len(names))
@@ -73,7 +73,7 @@ def _cell(n_equations: int) -> tuple[float, float]:
     """Return width and height of a cell in pixels."""
     if n_equations <= ROOMY:
         return (96.0, 58.0) if n_equations <= 6 else (88.0, 54.0)
-    return (60.0, 38.0) if n_equations <= TIGHT else (26.0, 17.0)
+    return (60.0, 38.0) if n_equations <= TIGHT else (25.0, 17.0)
 
 
 def _cells(names: tuple[str, ...], table: pd.DataFrame) -> tuple[Array, Array, Array]:
@@ -95,10 +95,9 @@ def _label(axes: Axes, names: tuple[str, ...], letters: int) -> None:
     axes.tick_params(axis="x", length=0, pad=16 if roomy else 4)
     if roomy:
         for column in range(count):
-            for value in (-1, 0, 1):
-                at = column + 0.5 + 0.46 * value
+            for at, value, side in ((0.03, -1, "left"), (0.5, 0, "center"), (0.97, 1, "right")):
                 text = fixed(value, 0)
-                axes.text(at, count + 0.05, text, ha="center", va="top", fontsize=8.5, color=MUTED)
+                axes.text(column + at, count + 0.05, text, ha=side, va="top", fontsize=8.5, color=MUTED)
 
 
 def _colour(values: Array) -> str:
@@ -106,7 +105,7 @@ def _colour(values: Array) -> str:
     return VERMILION if low > 0 else BLUE if high < 0 else UNCLEAR
 
 
-def _grounds(axes: Axes, rows: Array, columns: Array, values: Array) -> None:
+def _grounds(axes: Axes, rows: Array, columns: Array, values: Array, n_equations: int) -> None:
     from matplotlib.collections import LineCollection, PatchCollection
     from matplotlib.patches import Rectangle
 
@@ -114,7 +113,8 @@ def _grounds(axes: Axes, rows: Array, columns: Array, values: Array) -> None:
     boxes = [Rectangle((c + 0.02, r + 0.03), 0.96, 0.94) for r, c in zip(rows, columns, strict=True)]
     colours = [tints[_colour(v)] for v in values]
     axes.add_collection(PatchCollection(boxes, facecolors=colours, edgecolors=PALE, linewidths=0.8))
-    middles = [[(c + 0.5, r + 0.08), (c + 0.5, r + 0.92)] for r, c in zip(rows, columns, strict=True)]
+    top = 0.08 if n_equations > TIGHT else 0.55
+    middles = [[(c + 0.5, r + top), (c + 0.5, r + 0.92)] for r, c in zip(rows, columns, strict=True)]
     axes.add_collection(LineCollection(middles, colors=FAINT, linewidths=0.8))
 
 

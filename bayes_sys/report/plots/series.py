@@ -136,9 +136,10 @@ def _label(axes: Axes, series: Series) -> None:
 
 def _sides(count: int) -> list[Literal["left", "center", "right"]]:
     """Return how tick labels align, so that the first and the last stay inside the picture."""
-    if count == 1:
-        return ["center"]
-    return ["left", *["center" for _ in range(count - 2)], "right"]
+    sides: list[Literal["left", "center", "right"]] = ["center"] * count
+    if count > 1:
+        sides[0], sides[-1] = "left", "right"
+    return sides
 
 
 def _in_words(name: str, series: Series) -> str:
