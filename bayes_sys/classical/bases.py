@@ -3,10 +3,10 @@
 With ``X_i = Q_i R_i`` for each equation, generalised least squares in the coordinates ``R_i b_i`` has
 the normal matrix ``Omega_ij Q_i'Q_j``. Its condition number is at most that of the error correlation,
 however badly the regressors are scaled or however close to collinear they are within an equation; the
-squaring of the condition number, for which normal equations are feared, does not happen. One step of
-refinement with residuals taken from the rows makes the solution as good as that of a QR factorisation of
-the whole stacked system (the corrected seminormal equations: Björck, Numerical Methods for Least Squares
-Problems, 1996, section 6.6.5), at the price of one K x K Cholesky factor.
+squaring of the condition number, for which normal equations are feared (Björck, Numerical Methods for
+Least Squares Problems, 1996, section 2.2), does not happen. What error remains is of the size that
+rounding the error covariance itself would cause, so a QR factorisation of the whole stacked system would
+gain nothing, at far greater cost than one K x K Cholesky factor.
 """
 
 from __future__ import annotations

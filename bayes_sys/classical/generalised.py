@@ -124,11 +124,8 @@ def solve(bases: Bases, sigma: Array) -> Solution | None:
     where = bases.equation
     normal = scipy.linalg.cho_factor(omega[np.ix_(where, where)] * bases.gram, lower=True)
     residuals = bases.residuals / scales
-    deviation = np.zeros(len(where))
-    for _ in range(2):
-        step = scipy.linalg.cho_solve(normal, bases.onto(residuals @ white.T @ white))
-        deviation += step
-        residuals = residuals - bases.fitted(step)
+    deviation = scipy.linalg.cho_solve(normal, bases.onto(residuals @ omega))
+    residuals = residuals - bases.fitted(deviation)
     units = scales[where]
     return Solution(
         coordinates=bases.projections + deviation * units,

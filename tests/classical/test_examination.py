@@ -5,6 +5,7 @@ import time
 
 import numpy as np
 import pytest
+import scipy.stats
 from helpers import make_system
 
 from bayes_sys.classical.check import Check
@@ -83,6 +84,13 @@ def test_a_singular_residual_covariance_is_a_warning():
     assert (check.figure, check.threshold, check.verdict) == (5.0, 4.0, "warning")
 
 
+def test_many_equations_for_the_free_periods_are_noted():
+    assert checks_of(system_of(7, (3, 3), 30), simulations=0)["equations_and_periods", ""].verdict == "fine"
+    crowded = checks_of(system_of(7, (3,) * 6, 18), simulations=0)["equations_and_periods", ""]
+    assert crowded.verdict == "note"
+    assert crowded.sentence.startswith("6 equations with 15 free periods each")
+
+
 def test_shared_shocks_are_found_and_their_absence_too():
     names = (
         "shared_shocks_lm",
@@ -132,6 +140,16 @@ def test_the_equation_contained_in_all_others_is_named():
     assert check.figure == 1.0
     assert "“b”" in check.sentence
     assert checks_of(system_of(13, (2, 3), 20))["identical_regressors", ""].verdict == "fine"
+
+
+def test_nearly_the_same_regressors_are_not_identical():
+    rng = np.random.default_rng(13)
+    x = rng.normal(size=30)
+    designs = [np.column_stack([np.ones(30), x + e]) for e in (0.0, 0.01 * rng.normal(size=30))]
+    check = checks_of(make_system(designs, rng.normal(size=(30, 2))), simulations=0)[
+        "identical_regressors", ""
+    ]
+    assert (check.figure, check.verdict) == (0.0, "fine")
 
 
 @pytest.mark.parametrize("rho", [0.6, 0.9])
@@ -227,6 +245,8 @@ def test_an_outlying_period_is_named_by_its_label():
     system = make_system([e.design for e in system.equations], responses, periods=periods)
     check = checks_of(system)["outlying_period", "a"]
     assert check.verdict == "note"
+    # Bonferroni over 24 periods, two-sided 5%, Student t with 24 - 2 - 1 degrees of freedom.
+    assert check.threshold == pytest.approx(scipy.stats.t.isf(0.05 / 48, 21))
     assert "2002-Q2" in check.sentence
 
 

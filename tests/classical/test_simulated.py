@@ -67,8 +67,8 @@ def test_a_simulated_ratio_is_the_ratio_of_the_estimators():
         cross = residuals.transpose(0, 2, 1) @ residuals
         onto = bases.rows.T @ residuals
         exact = ratio_of(system)
-        settled = simulated.RISE_TOLERANCE * 10.0
-        assert simulated._count_reaching(bases, cross, onto, exact - settled) == 1
+        # The batched one stops at a rise of 1e-4 a step; ten times that may be missing.
+        assert simulated._count_reaching(bases, cross, onto, exact - 1e-3) == 1
         assert simulated._count_reaching(bases, cross, onto, exact + 1e-8) == 0
 
 

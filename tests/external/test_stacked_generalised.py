@@ -100,9 +100,14 @@ def test_calendar_years_and_their_squares_keep_eight_digits():
     np.testing.assert_allclose(estimate.coefficients, exact, rtol=1e-8)
 
 
-def test_nearly_perfect_error_correlation_keeps_eight_digits():
-    designs, responses = different_regressors(5, (3, 2), 12)
+@pytest.mark.parametrize("counts", [(3, 2), (3, 2, 4), (4, 4, 4, 4)])
+@pytest.mark.parametrize("bits", [10, 20, 30])
+def test_nearly_singular_error_covariance_costs_no_more_than_rounding_it(counts, bits):
+    # A change of the covariance in its last bit moves the answer by about its condition number times 1e-16.
+    designs, responses = different_regressors(5, counts, 16)
     designs, responses = [np.round(d, 3) for d in designs], np.round(responses, 3)
-    sigma = np.array([[1.0, 1.0 - 2.0**-30], [1.0 - 2.0**-30, 1.0]])
+    loading = np.round(np.random.default_rng(1).normal(size=(len(counts), 1)), 2)
+    sigma = loading @ loading.T + np.eye(len(counts)) * 2.0**-bits
     estimate = gls(make_system(designs, responses), sigma)
-    np.testing.assert_allclose(estimate.coefficients, exact_gls(designs, responses, sigma), rtol=1e-8)
+    tolerance = np.linalg.cond(sigma) * np.finfo(float).eps + 1e-13
+    np.testing.assert_allclose(estimate.coefficients, exact_gls(designs, responses, sigma), rtol=tolerance)
