@@ -5,22 +5,20 @@ Exit codes: 0 done; 2 the input is wrong; 3 the posterior did not pass the gate;
 
 from __future__ import annotations
 
+import argparse
 import io
 import json
 import os
 import shlex
 import sys
-import traceback
 import warnings
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from contextlib import redirect_stdout
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Annotated, Any, Literal, TextIO
+from typing import Any, NoReturn, TextIO
 
-import typer
-
-from bayes_sys.errors import BayesSysError, InputError
+from bayes_sys.errors import BayesSysError, InputError, nearest
 from bayes_sys.sampling.progress import Progress, Watcher
 
 PROGRAM = "bayes-sys"
@@ -30,37 +28,7 @@ DONE, FAULT, WRONG_INPUT, GATE_FAILED = 0, 1, 2, 3
 INTERRUPTED = (
     "Interrupted. A run that had begun stays marked as incomplete; the same command starts it again."
 )
-
-app = typer.Typer(
-    help="Joint Bayesian regressions for several units with short series and shared shocks.",
-    epilog="Exit codes: 0 done; 2 the input is wrong; 3 the gate was not passed; 1 anything else.",
-    rich_markup_mode=None,
-    pretty_exceptions_enable=False,
-    context_settings={"help_option_names": ["--help", "-h"]},
-)
-
-EngineName = Literal["auto", "direct", "pymc"]
-StudyFile = Annotated[
-    Path, typer.Argument(metavar="STUDY", help="The study: a TOML file.", show_default=False)
-]
-Out = Annotated[Path | None, typer.Option("--out", metavar="DIR", help="Where to write.", show_default=False)]
-DemoOut = Annotated[Path, typer.Option("--out", metavar="DIR", help="Where to write.")]
-Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace what an earlier one has left there.")]
-Quiet = Annotated[
-    bool, typer.Option("--quiet", help="No progress, no summary: only the path of what was made.")
-]
-Json = Annotated[bool, typer.Option("--json", help="One JSON object on standard output, nothing else.")]
-Seed = Annotated[int | None, typer.Option(help="Seed, instead of the study's.", show_default=False)]
-Chains = Annotated[int | None, typer.Option(help="Chains, instead of the study's.", show_default=False)]
-Draws = Annotated[int | None, typer.Option(help="Per chain, instead of the study's.", show_default=False)]
-Warmup = Annotated[int | None, typer.Option(help="Per chain, instead of the study's.", show_default=False)]
-Engine = Annotated[
-    EngineName, typer.Option(help="direct: the compiled density; pymc: the PyMC model itself.")
-]
-RunPath = Annotated[Path, typer.Argument(metavar="RUN", help="The folder of a run.", show_default=False)]
-CardName = Annotated[
-    str | None, typer.Argument(metavar="[NAME]", help="A card's name, or a path.", show_default=False)
-]
+CODES = "Exit codes: 0 done; 2 the input is wrong; 3 the posterior did not pass the gate; 1 anything else."
 
 
 @dataclass(frozen=True)
@@ -76,145 +44,59 @@ class Answer:
     exit_code: int = DONE
 
 
-@dataclass(frozen=True)
-class Session:
-    """What surrounds a command: who watches it, and how it was called."""
+def examine(given: argparse.Namespace, watch: Watcher) -> Answer:
+    """Check data and design without sampling."""
+    watch(Progress("reading"))
+    from bayes_sys import display, job
 
-    watch: Watcher
-    command: str
-
-
-@dataclass(frozen=True)
-class Task:
-    """A parsed command, to be carried out after the parser is done."""
-
-    work: Callable[[Session], Answer]
-    quiet: bool
+    found = job.examine(given.study, out=given.out, overwrite=given.overwrite, progress=watch)
+    more = {"checks": found.rows, "benchmark": found.benchmark.to_dict("records")}
+    said = [*found.prepared.system.notes, *found.prepared.warnings]
+    return Answer("complete", found.place, None, said, display.examination_text(found), more)
 
 
-@app.command()
-def examine(
-    study: StudyFile,
-    out: Out = None,
-    overwrite: Overwrite = False,
-    quiet: Quiet = False,
-    as_json: Json = False,
-) -> Task:
-    """Check data and design without sampling.
+def run(given: argparse.Namespace, watch: Watcher) -> Answer:
+    """Do the whole job, from study to page."""
+    watch(Progress("reading"))
+    from bayes_sys import display, job
 
-    Computes the classical estimates too. Writes nothing, unless --out names a folder for examination.json
-    and benchmark.csv.
-    """
-
-    def work(session: Session) -> Answer:
-        session.watch(Progress("reading"))
-        from bayes_sys import display, job
-
-        found = job.examine(study, out=out, overwrite=overwrite, progress=session.watch)
-        more = {"checks": found.rows, "benchmark": found.benchmark.to_dict("records")}
-        said = [*found.prepared.system.notes, *found.prepared.warnings]
-        return Answer("complete", found.place, None, said, display.examination_text(found), more)
-
-    return Task(work, quiet)
+    done = job.run(
+        given.study,
+        out=given.out,
+        overwrite=given.overwrite,
+        overrides=job.Overrides(given.chains, given.warmup, given.draws, given.seed, given.engine),
+        command=given.command_line,
+        progress=watch,
+    )
+    return _of_run(done.manifest, done.folder.path, display.run_text(done))
 
 
-@app.command()
-def run(
-    study: StudyFile,
-    out: Out = None,
-    overwrite: Overwrite = False,
-    seed: Seed = None,
-    chains: Chains = None,
-    draws: Draws = None,
-    warmup: Warmup = None,
-    engine: Engine = "auto",
-    quiet: Quiet = False,
-    as_json: Json = False,
-) -> Task:
-    """Do the whole job, from study to page.
-
-    Examines data and design, samples, holds the draws against the gate, writes tables and page. Writes the
-    folder runs/<name of the study file>, unless --out names another place.
-    """
-    return _run_task(study, out, overwrite, (chains, warmup, draws, seed, engine), quiet)
-
-
-@app.command()
-def demo(
-    out: DemoOut = DEMO_PLACE,
-    overwrite: Overwrite = False,
-    seed: Seed = None,
-    chains: Chains = None,
-    draws: Draws = None,
-    warmup: Warmup = None,
-    engine: Engine = "auto",
-    quiet: Quiet = False,
-    as_json: Json = False,
-) -> Task:
-    """Run the case study that comes along.
-
-    It is about water demand in five invented districts; nothing in it is real.
-    """
+def demo(given: argparse.Namespace, watch: Watcher) -> Answer:
+    """Run the case study that comes along."""
     from bayes_sys.shipped import case_study
 
-    study = case_study(DEMO_CASE) / "study.toml"
-    return _run_task(study, out, overwrite, (chains, warmup, draws, seed, engine), quiet)
+    given.study = case_study(DEMO_CASE) / "study.toml"
+    return run(given, watch)
 
 
-@app.command()
-def report(run_folder: RunPath, quiet: Quiet = False, as_json: Json = False) -> Task:
+def report(given: argparse.Namespace, watch: Watcher) -> Answer:
     """Make the page of a finished run again."""
+    watch(Progress("page"))
+    from bayes_sys import job
 
-    def work(session: Session) -> Answer:
-        session.watch(Progress("page"))
-        from bayes_sys import job
-
-        page = job.report(run_folder)
-        return _of_run(page.manifest, page.path)
-
-    return Task(work, quiet)
+    page = job.report(given.run)
+    return _of_run(page.manifest, page.path)
 
 
-@app.command()
-def cards(name: CardName = None, quiet: Quiet = False, as_json: Json = False) -> Task:
+def cards(given: argparse.Namespace, watch: Watcher) -> Answer:
     """List the prior cards, or explain one."""
+    from bayes_sys import display, job
 
-    def work(session: Session) -> Answer:
-        from bayes_sys import display, job
-
-        if name is None:
-            found = job.cards()
-            return Answer("complete", text=display.cards_text(found), more={"cards": found})
-        card = job.explain_card(name)
-        return Answer("complete", text=display.card_text(card), more={"card": card})
-
-    return Task(work, quiet)
-
-
-def _run_task(
-    study: Path,
-    out: Path | None,
-    overwrite: bool,
-    settings: tuple[int | None, int | None, int | None, int | None, EngineName],
-    quiet: bool,
-) -> Task:
-    """Return the task that `run` and `demo` share; settings are chains, warmup, draws, seed, engine."""
-
-    def work(session: Session) -> Answer:
-        session.watch(Progress("reading"))
-        from bayes_sys import display, job
-
-        done = job.run(
-            study,
-            out=out,
-            overwrite=overwrite,
-            overrides=job.Overrides(*settings),
-            command=session.command,
-            progress=session.watch,
-        )
-        return _of_run(done.manifest, done.folder.path, display.run_text(done))
-
-    return Task(work, quiet)
+    if given.name is None:
+        found = job.cards()
+        return Answer("complete", text=display.cards_text(found), more={"cards": found})
+    card = job.explain_card(given.name)
+    return Answer("complete", text=display.card_text(card), more={"card": card})
 
 
 def _of_run(manifest: Mapping[str, Any], out: Path, text: str = "") -> Answer:
@@ -223,6 +105,133 @@ def _of_run(manifest: Mapping[str, Any], out: Path, text: str = "") -> Answer:
     said = [*gate["failures"], *gate["advice"], *manifest["messages"]]
     code = DONE if gate["passed"] else GATE_FAILED
     return Answer(manifest["status"], out, gate, said, text, exit_code=code)
+
+
+class Parser(argparse.ArgumentParser):
+    """A parser whose complaints are errors of ours, and which knows the nearest option."""
+
+    def error(self, message: str) -> NoReturn:
+        """Raise what is wrong with the command line."""
+        raise InputError(f"{message}.", where=self.prog, mend=f"“{self.prog} --help” shows what there is.")
+
+    def refuse(self, unknown: Sequence[str]) -> NoReturn:
+        """Raise for arguments that this command does not know."""
+        options = [name for name in self._option_string_actions if name.startswith("--")]
+        hint = (
+            nearest(unknown[0], options)
+            if unknown[0].startswith("-")
+            else f"“{self.prog} --help” shows more."
+        )
+        raise InputError(f"there is no “{unknown[0]}”.", where=self.prog, mend=hint)
+
+    def _check_value(self, action: argparse.Action, value: Any) -> None:
+        """Refuse a value that is not among the choices, naming the nearest."""
+        if action.choices is not None and value not in action.choices:
+            what = "command" if action.dest == "command_name" else f"--{action.dest}"
+            raise InputError(
+                f"there is no {what} “{value}”.", where=self.prog, mend=nearest(value, action.choices)
+            )
+
+
+def build_parser() -> tuple[Parser, dict[str, Parser]]:
+    """Return the parser of the whole command line, and that of every command."""
+    parser = Parser(
+        prog=PROGRAM,
+        description="Joint Bayesian regressions for several units with short series and shared shocks.",
+        epilog=CODES,
+        allow_abbrev=False,
+    )
+    places = parser.add_subparsers(metavar="COMMAND", dest="command_name", required=True)
+    parsers = {}
+    for work, more, options in (
+        (
+            examine,
+            "Computes the classical estimates too. Writes nothing, unless --out names a folder for "
+            "examination.json and benchmark.csv.",
+            (_study, _place),
+        ),
+        (
+            run,
+            "Examines data and design, samples, holds the draws against the gate, writes tables and page. "
+            "Writes the folder runs/<name of the study file>, unless --out names another place.",
+            (_study, _place, _sampling),
+        ),
+        (
+            demo,
+            "It is about water demand in five invented districts; nothing in it is real. Writes the folder "
+            f"{DEMO_PLACE}, unless --out names another place.",
+            (_place, _sampling),
+        ),
+        (report, "Nothing is sampled; everything else in the folder stays as it is.", (_run,)),
+        (cards, "A card says what is held plausible before the data are seen.", (_card,)),
+    ):
+        name, about = work.__name__, str(work.__doc__)
+        command = places.add_parser(
+            name, help=about, description=f"{about} {more}", epilog=CODES, allow_abbrev=False
+        )
+        for add in (*options, _voice):
+            add(command)
+        command.set_defaults(work=work)
+        parsers[name] = command
+    parsers["demo"].set_defaults(out=DEMO_PLACE)
+    return parser, parsers
+
+
+def _study(parser: Parser) -> None:
+    parser.add_argument("study", metavar="STUDY", type=Path, help="the study: a TOML file")
+
+
+def _run(parser: Parser) -> None:
+    parser.add_argument("run", metavar="RUN", type=Path, help="the folder of a run")
+
+
+def _card(parser: Parser) -> None:
+    parser.add_argument("name", metavar="NAME", nargs="?", help="a card to explain: its name, or a path")
+
+
+def _place(parser: Parser) -> None:
+    parser.add_argument("--out", metavar="DIR", type=Path, help="where to write")
+    parser.add_argument("--overwrite", action="store_true", help="replace what an earlier one has left there")
+
+
+def _sampling(parser: Parser) -> None:
+    for name in ("seed", "chains"):
+        parser.add_argument(f"--{name}", type=int, metavar="N", help="instead of the study's")
+    for name in ("draws", "warmup"):
+        parser.add_argument(f"--{name}", type=int, metavar="N", help="per chain, instead of the study's")
+    parser.add_argument(
+        "--engine",
+        choices=("auto", "direct", "pymc"),
+        default="auto",
+        help="direct: the compiled density; pymc: the PyMC model itself; auto: direct wherever it can",
+    )
+
+
+def _voice(parser: Parser) -> None:
+    parser.add_argument(
+        "--quiet", action="store_true", help="no progress, no summary: only the path of what was made"
+    )
+    parser.add_argument(
+        "--json", action="store_true", help="one JSON object on standard output, nothing else"
+    )
+
+
+def parse(arguments: Sequence[str]) -> argparse.Namespace:
+    """Parse a command line.
+
+    Raises
+    ------
+    InputError
+        If it is wrong.
+    SystemExit
+        If help was asked for, which is then printed.
+    """
+    parser, parsers = build_parser()
+    given, unknown = parser.parse_known_args(list(arguments) or ["--help"])
+    if unknown:
+        parsers[given.command_name].refuse(unknown)
+    given.command_line = shlex.join([PROGRAM, *arguments])
+    return given
 
 
 def main() -> None:
@@ -277,33 +286,28 @@ def execute(arguments: Sequence[str]) -> int:
 def _answer(arguments: Sequence[str]) -> Answer | None:
     """Parse and work; every failure becomes an answer. None: help was asked for and has been printed."""
     try:
-        task = app(args=list(arguments) or ["--help"], prog_name=PROGRAM, standalone_mode=False)
-        if not isinstance(task, Task):
-            return None
+        given = parse(arguments)
         from bayes_sys import display
 
-        with display.watching(quiet=task.quiet) as watch:
-            return task.work(Session(watch, shlex.join([PROGRAM, *arguments])))
+        with display.watching(quiet=given.quiet) as watch:
+            answer: Answer = given.work(given, watch)
+            return answer
+    except SystemExit:
+        return None
     except BayesSysError as error:
         status = "input-error" if isinstance(error, InputError) else "error"
         return Answer(status, messages=[str(error)], exit_code=error.exit_code)
-    except typer.TyperException as error:
-        return Answer("input-error", messages=[_usage_message(error)], exit_code=WRONG_INPUT)
     except KeyboardInterrupt:
         return Answer("interrupted", messages=[INTERRUPTED], exit_code=FAULT)
     except Exception as error:
         return _unexpected(error)
 
 
-def _usage_message(error: typer.TyperException) -> str:
-    """Return what the parser says of a wrong command line, ending in a mend."""
-    said = error.format_message().replace("Value error, ", "")
-    return f"{said}{'' if said.endswith(('.', '?')) else '.'} “{PROGRAM} --help” shows what there is."
-
-
 def _unexpected(error: Exception) -> Answer:
     """Return the one line that an error nobody foresaw comes to."""
     if os.environ.get(DEBUG):
+        import traceback
+
         traceback.print_exc(file=sys.stderr)
     first = (str(error).strip().splitlines() or ["no message"])[0]
     message = (

@@ -122,7 +122,7 @@ def run_text(run: Run) -> str:
         *coefficient_lines(run.coefficients),
         "",
         *(["What to mind", *points(said), ""] if said else []),
-        *textwrap.wrap(CAUTION, min(shutil.get_terminal_size().columns, WIDEST)),
+        *wrapped(CAUTION),
         "",
         f"Page: {run.folder.path / runs.REPORT}",
     ]
@@ -216,9 +216,16 @@ def benchmark_lines(table: pd.DataFrame) -> list[str]:
 
 def points(sentences: Iterable[str]) -> list[str]:
     """Return sentences as points of a list, wrapped to the terminal; a mark in front replaces the dash."""
-    width = min(shutil.get_terminal_size().columns, WIDEST)
     marked = (s if s[:2] in ("* ", "! ") else f"- {s}" for s in sentences)
-    return [textwrap.fill(s, width, subsequent_indent="  ") for s in marked]
+    return [line for s in marked for line in wrapped(s, indent="  ")]
+
+
+def wrapped(text: str, *, indent: str = "") -> list[str]:
+    """Return a text as lines no wider than the terminal, the second and later ones indented."""
+    width = min(shutil.get_terminal_size().columns, WIDEST)
+    return textwrap.wrap(
+        text, width, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False
+    )
 
 
 def _marked(row: Mapping[str, Any]) -> str:
@@ -263,14 +270,25 @@ def _number(value: Any) -> str:
 
 def cards_text(cards: Sequence[Mapping[str, str]]) -> str:
     """Return the list of prior cards as text."""
-    width = max(len(card["name"]) for card in cards)
-    lines = [f"{card['name'].ljust(width)}  {card['summary']}" for card in cards]
-    return "\n".join([*lines, "", "bayes-sys cards NAME explains one."])
+    return "\n".join(
+        [
+            *points(f"{card['name']}: {card['summary']}" for card in cards),
+            "",
+            "bayes-sys cards NAME explains one.",
+        ]
+    )
 
 
 def card_text(card: Mapping[str, Any]) -> str:
     """Return a prior card in words, and as its file says it."""
-    words = [f"- {sentence}" for sentence in card["words"]]
     return "\n".join(
-        [f"{card['name']}: {card['summary']}", "", *words, "", "The card:", "", card["text"].rstrip()]
+        [
+            *wrapped(f"{card['name']}: {card['summary']}"),
+            "",
+            *points(card["words"]),
+            "",
+            "The card:",
+            "",
+            card["text"].rstrip(),
+        ]
     )

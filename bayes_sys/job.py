@@ -27,7 +27,6 @@ from bayes_sys.prior.resolve import resolve
 from bayes_sys.prior.words import describe
 from bayes_sys.record import Clock, closing, opening
 from bayes_sys.runs import RunFolder
-from bayes_sys.sampling.engine import EngineName, choose_engine
 from bayes_sys.sampling.progress import Progress, Watcher, unwatched
 from bayes_sys.shipped import card_names, priors_folder
 from bayes_sys.study.faults import study_error
@@ -39,6 +38,7 @@ from bayes_sys.system.system import System
 if TYPE_CHECKING:
     import pandas as pd
 
+    from bayes_sys.sampling.engine import EngineName
     from bayes_sys.sampling.gate import Limits, Outcome
 
 
@@ -292,7 +292,10 @@ def prepare(
 ) -> Prepared:
     """Read, align, compute the benchmark, check; everything that can be wrong with the input is met here."""
     progress(Progress("reading"))
-    choose_engine(overrides.engine)
+    if overrides.engine != "auto":
+        from bayes_sys.sampling.engine import choose_engine
+
+        choose_engine(overrides.engine)
     study = overridden(read_study(study_path), overrides)
     system = build_system(study)
     card = study_card(study)
@@ -376,4 +379,4 @@ def write_page(folder: RunFolder, manifest: Mapping[str, Any]) -> Path:
     from bayes_sys.report.content import load_content
     from bayes_sys.report.page import page
 
-    return folder.write_text(runs.REPORT, page(load_content(folder.path)))
+    return folder.write_text(runs.REPORT, page(load_content(folder.path, manifest=manifest)))
