@@ -81,7 +81,7 @@ def closing(outcome: Outcome, limits: Limits) -> dict[str, Any]:
     """
     verdict = outcome.verdict
     gate = {
-        **verdict.figures,
+        **asdict(verdict.figures),
         "passed": verdict.passed,
         "limits": asdict(limits),
         "failures": verdict.failures,

@@ -108,7 +108,7 @@ def evaluate(u: Array, gradient: Array, data: Array) -> float:
     square = np.empty((n, n))
 
     log_w = whitening.forward(u, periods, guess_inverse, w, root, scales)
-    value = whitening.log_volume(w, scales) + periods * log_w
+    value: float = whitening.log_volume(w, scales) + periods * log_w
     value += coefficient_block.forward(v, members, groups, scale, by_score)
     value += error_block.collapsed(
         w, scale, members, groups, centre, xx, xe, ee, equation, by_log_scale, square

@@ -30,8 +30,7 @@ def sample_direct(system: System, prior: Prior, settings: Settings, watch: Watch
         watch(Progress("compiling"))
     callbacks = entry_points()
     chains = sample_callback(
-        callbacks.density,
-        callbacks.expand,
+        callbacks,
         packed.data,
         packed.n_dim,
         lambda seed: _initial_point(packed, seed),

@@ -7,14 +7,14 @@ arXiv:1604.00695: a fraction below 0.3 says that the chains move too slowly betw
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
-from bayes_sys.posterior.summary import convergence
+from bayes_sys.posterior.summary import convergence, draws_of
 from bayes_sys.prior.cards import PriorCard
 from bayes_sys.sampling.engine import EngineName, sample
 from bayes_sys.sampling.progress import Progress, Watcher
@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
 Array = NDArray[np.float64]
+Finding = tuple[str, str]  # what failed, what to do about it
 
 LEAST_BFMI = 0.3
 REPORTED = ("coefficients", "scales", "correlations", "pooled_mean", "pooled_spread")
@@ -40,21 +41,25 @@ class Limits:
 
 
 @dataclass(frozen=True)
-class Verdict:
-    """The gate's answer.
+class Figures:
+    """What the gate looks at, and which quantity stands worst."""
 
-    Parameters
-    ----------
-    passed : bool
-    figures : dict
-        ``rhat_max``, ``ess_bulk_min``, ``ess_tail_min`` (NaN if nothing moves), ``divergences``, ``bfmi_min``,
-        and the names of the quantities that stand worst.
-    failures, advice : tuple of str
-        In plain words; empty when passed.
-    """
+    rhat_max: float
+    rhat_worst: str
+    ess_bulk_min: float
+    ess_bulk_worst: str
+    ess_tail_min: float
+    ess_tail_worst: str
+    divergences: int
+    bfmi_min: float
+
+
+@dataclass(frozen=True)
+class Verdict:
+    """The gate's answer: passed or not, the figures, and failures and advice in plain words (empty when passed)."""
 
     passed: bool
-    figures: dict[str, float | int | str]
+    figures: Figures
     failures: tuple[str, ...]
     advice: tuple[str, ...]
 
@@ -71,37 +76,15 @@ class Outcome:
 def hold(posterior: xr.DataTree, limits: Limits) -> Verdict:
     """Hold a posterior against the gate: everything that is reported and every free hyperparameter."""
     figures = _figures(posterior)
-    failures, advice = [], []
-    if not figures["rhat_max"] <= limits.rhat:
-        failures.append(
-            f"The chains have not mixed: R-hat is {figures['rhat_max']:.3f} for {figures['rhat_worst']}, "
-            f"at most {limits.rhat:g} is allowed."
-        )
-        advice.append("Let the chains run longer (--warmup, --draws).")
-    for part in ("bulk", "tail"):
-        least = figures[f"ess_{part}_min"]
-        if not least >= limits.ess:
-            failures.append(
-                f"Too few effective draws: {least:.0f} ({part}) for {figures[f'ess_{part}_worst']}, at least "
-                f"{limits.ess:g} are wanted."
-            )
-            advice.append("Take more draws (--draws).")
-    if figures["divergences"] > limits.divergences:
-        failures.append(
-            f"{figures['divergences']} divergent transitions after warmup, at most {limits.divergences} allowed: "
-            "part of the posterior may not have been reached."
-        )
-        advice.append(
-            "The prior leaves room for values that are hard to reach: tighten the prior of the error scales or "
-            "of the coefficients to what is plausible, or raise the correlation's concentration."
-        )
-    if figures["bfmi_min"] < LEAST_BFMI:
-        failures.append(
-            f"The energy diagnostic is {figures['bfmi_min']:.2f}, at least {LEAST_BFMI} is wanted: heavy tails "
-            "are explored slowly."
-        )
-        advice.append("Use a prior with lighter tails, or let the chains run longer (--warmup, --draws).")
-    return Verdict(not failures, figures, tuple(failures), tuple(dict.fromkeys(advice)))
+    findings = (
+        *_mixing(figures, limits),
+        *_effective_draws("bulk", figures.ess_bulk_min, figures.ess_bulk_worst, limits),
+        *_effective_draws("tail", figures.ess_tail_min, figures.ess_tail_worst, limits),
+        *_divergences(figures, limits),
+        *_energy(figures),
+    )
+    failures = tuple(failure for failure, _ in findings)
+    return Verdict(not findings, figures, failures, tuple(dict.fromkeys(advice for _, advice in findings)))
 
 
 def sample_until_passed(
@@ -144,32 +127,71 @@ def _second(progress: Watcher) -> Callable[[Progress], None]:
     return watch
 
 
-def _figures(posterior: xr.DataTree) -> dict[str, float | int | str]:
+def _mixing(figures: Figures, limits: Limits) -> Iterator[Finding]:
+    if not figures.rhat_max <= limits.rhat:  # a nan is no pass
+        yield (
+            f"The chains have not mixed: R-hat is {figures.rhat_max:.3f} for {figures.rhat_worst}, "
+            f"at most {limits.rhat:g} is allowed.",
+            "Let the chains run longer (--warmup, --draws).",
+        )
+
+
+def _effective_draws(part: str, least: float, worst: str, limits: Limits) -> Iterator[Finding]:
+    if not least >= limits.ess:
+        yield (
+            f"Too few effective draws: {least:.0f} ({part}) for {worst}, at least {limits.ess:g} are wanted.",
+            "Take more draws (--draws).",
+        )
+
+
+def _divergences(figures: Figures, limits: Limits) -> Iterator[Finding]:
+    if figures.divergences > limits.divergences:
+        yield (
+            f"{figures.divergences} divergent transitions after warmup, at most {limits.divergences} allowed: "
+            "part of the posterior may not have been reached.",
+            "The prior leaves room for values that are hard to reach: tighten the prior of the error scales or "
+            "of the coefficients to what is plausible, or raise the correlation's concentration.",
+        )
+
+
+def _energy(figures: Figures) -> Iterator[Finding]:
+    if not figures.bfmi_min >= LEAST_BFMI:
+        yield (
+            f"The energy diagnostic is {figures.bfmi_min:.2f}, at least {LEAST_BFMI} is wanted: heavy tails "
+            "are explored slowly.",
+            "Use a prior with lighter tails, or let the chains run longer (--warmup, --draws).",
+        )
+
+
+def _figures(posterior: xr.DataTree) -> Figures:
     draws, labels = _reported(posterior)
     rhat, bulk, tail = convergence(draws)
-    figures: dict[str, float | int | str] = {}
-    for name, values, worst in (
-        ("rhat_max", rhat, np.nanargmax),
-        ("ess_bulk_min", bulk, np.nanargmin),
-        ("ess_tail_min", tail, np.nanargmin),
-    ):
-        place = int(worst(values))
-        figures[name] = float(values[place])
-        figures[name[: name.rindex("_")] + "_worst"] = labels[place]
-    statistics = posterior["sample_stats"]
-    figures["divergences"] = int(statistics["diverging"].sum())
-    figures["bfmi_min"] = float(_bfmi(statistics["energy"].values).min())
-    return figures
+    worst_rhat, worst_bulk, worst_tail = (
+        int(np.nanargmax(rhat)),
+        int(np.nanargmin(bulk)),
+        int(np.nanargmin(tail)),
+    )
+    return Figures(
+        rhat_max=float(rhat[worst_rhat]),
+        rhat_worst=labels[worst_rhat],
+        ess_bulk_min=float(bulk[worst_bulk]),
+        ess_bulk_worst=labels[worst_bulk],
+        ess_tail_min=float(tail[worst_tail]),
+        ess_tail_worst=labels[worst_tail],
+        divergences=int(draws_of(posterior, "diverging", "sample_stats").sum()),
+        bfmi_min=float(_bfmi(draws_of(posterior, "energy", "sample_stats")).min()),
+    )
 
 
 def _reported(posterior: xr.DataTree) -> tuple[Array, list[str]]:
     """Draws of every reported quantity, shape (n_chains, n_draws, n_quantities), and what each is called."""
-    columns, labels = [], []
+    group = posterior["posterior"].to_dataset()
+    columns: list[Array] = []
+    labels: list[str] = []
     for name in REPORTED:
-        if name in posterior["posterior"]:
-            values = posterior["posterior"][name]
-            columns.append(values.values)
-            labels.extend(f"{name}[{label}]" for label in values[values.dims[-1]].values)
+        if name in group:
+            columns.append(draws_of(posterior, name))
+            labels.extend(f"{name}[{label}]" for label in group[name][group[name].dims[-1]].values)
     return np.concatenate(columns, axis=2), labels
 
 

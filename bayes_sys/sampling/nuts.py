@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from bayes_sys.errors import SamplingError
+from bayes_sys.model.compiled import EntryPoints, value_and_gradient
 from bayes_sys.sampling.progress import Progress, Watcher
 from bayes_sys.sampling.settings import Settings
 
@@ -48,26 +49,32 @@ class Chains:
 
 
 def sample_callback(
-    density: int,
-    expand: int,
+    callbacks: EntryPoints,
     data: Array,
     n_dim: int,
     initial_point: Callable[[int], Array],
     settings: Settings,
     watch: Watcher,
 ) -> Chains:
-    """Sample a density given as addresses of C callbacks.
+    """Sample a density given as compiled callbacks.
 
     Parameters
     ----------
-    density, expand : int
-        Addresses, see ``model.compiled``.
+    callbacks : EntryPoints
     data : array of float
         What the callbacks read; kept alive by the sampler.
+    n_dim : int
     initial_point : callable
         From a chain's seed to its starting point, shape (n_dim,).
     """
-    return run(_Callback(density, expand, data, n_dim, initial_point), settings, watch)
+    try:
+        return run(_Callback(callbacks, data, n_dim, initial_point), settings, watch)
+    except PrivateDoorClosed:
+        return run(_through_python(data, n_dim, initial_point), settings, watch)
+
+
+class PrivateDoorClosed(Exception):
+    """nutpie's private module is not as it was when this was written."""
 
 
 def run(compiled: Any, settings: Settings, watch: Watcher) -> Chains:
@@ -78,9 +85,7 @@ def run(compiled: Any, settings: Settings, watch: Watcher) -> Chains:
         done = sum(chain.finished_draws for chain in chains)
         tuning = any(chain.tuning for chain in chains)
         total = settings.chains * (settings.warmup + settings.draws)
-        divergences = sum(
-            sum(draw >= settings.warmup for draw in chain.divergent_draws) for chain in chains
-        )
+        divergences = sum(sum(draw >= settings.warmup for draw in chain.divergent_draws) for chain in chains)
         watch(Progress("warmup" if tuning else "sampling", done, total, divergences))
 
     try:
@@ -159,20 +164,47 @@ class _Callback:
     reparameterized_names: list[str] = []  # noqa: RUF012
 
     def __init__(
-        self, density: int, expand: int, data: Array, n_dim: int, initial_point: Callable[[int], Array]
+        self, callbacks: EntryPoints, data: Array, n_dim: int, initial_point: Callable[[int], Array]
     ) -> None:
-        self.density, self.expand, self.data = density, expand, data
+        self.callbacks, self.data = callbacks, data
         self.n_dim, self.initial_point = n_dim, initial_point
 
     def _make_sampler(
         self, settings: Any, init_mean: Any, cores: int, progress: Any, callback: Any, rate: int, store: Any
     ) -> Any:
+        try:
+            return self._sampler(settings, cores, progress, callback, rate, store)
+        except (ImportError, AttributeError, TypeError) as change:
+            raise PrivateDoorClosed(str(change)) from change
+
+    def _sampler(self, settings: Any, cores: int, progress: Any, callback: Any, rate: int, store: Any) -> Any:
         from nutpie import _lib
 
         address = self.data.ctypes.data
-        expand = _lib.ExpandFunc(self.n_dim, self.n_dim, self.expand, address, self)
-        density = _lib.LogpFunc(self.density, address, self)
+        expand = _lib.ExpandFunc(self.n_dim, self.n_dim, self.callbacks.expand, address, self)
+        density = _lib.LogpFunc(self.callbacks.density, address, self)
         sizes: dict[str, int] = {}
         variables = _lib.PyVariable.new_variables([POINT], ["float64"], [(self.n_dim,)], sizes, {})
         model = _lib.PyMcModel(density, expand, variables, self.n_dim, sizes, {}, self.initial_point, None)
         return _lib.PySampler.from_pymc(settings, cores, model, progress, callback, rate, store)
+
+
+def _through_python(data: Array, n_dim: int, initial_point: Callable[[int], Array]) -> Any:
+    """Return the same model through nutpie's public door."""
+    from nutpie.compiled_pyfunc import from_pyfunc
+
+    def make_density() -> Callable[[Array], tuple[float, Array]]:
+        return lambda point: value_and_gradient(point, data)
+
+    def make_expand(seed1: int, seed2: int, chain: int) -> Callable[[Array], dict[str, Array]]:
+        return lambda point: {POINT: np.array(point)}
+
+    return from_pyfunc(
+        n_dim,
+        make_density,
+        make_expand,
+        [np.dtype(np.float64)],
+        [(n_dim,)],
+        [POINT],
+        make_initial_point_fn=initial_point,
+    )

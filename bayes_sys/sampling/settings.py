@@ -43,7 +43,8 @@ class Settings:
                 )
         if not 0 <= self.seed < 2**63:
             raise InputError(
-                f"seed is {self.seed}, expected a whole number from 0 to 2^63 - 1.", mend="Choose another seed."
+                f"seed is {self.seed}, expected a whole number from 0 to 2^63 - 1.",
+                mend="Choose another seed.",
             )
         if self.target_accept is not None and not 0.5 <= self.target_accept < 1:
             raise InputError(

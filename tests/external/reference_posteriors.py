@@ -11,9 +11,10 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from helpers import make_system
+
 from bayes_sys.prior.cards import PriorCard, build_card
 from bayes_sys.system.system import System
-from helpers import make_system
 
 FOLDER = Path(__file__).parent / "posteriors"
 
@@ -35,7 +36,9 @@ def reference_card(case: dict[str, Any], system: System) -> PriorCard:
         for k, regressor in enumerate(equation.regressors):
             mean, scale = case["prior"]["beta_mean"][i][k], case["prior"]["beta_sd"][i][k]
             lines[f"{equation.name}.{regressor}"] = {"mean": float(mean), "scale": float(scale)}
-    scales = {name: {"scale": float(s)} for name, s in zip(system.names, case["prior"]["sd_scale"], strict=True)}
+    scales = {
+        name: {"scale": float(s)} for name, s in zip(system.names, case["prior"]["sd_scale"], strict=True)
+    }
     return build_card(
         {
             "name": case["case"],

@@ -4,16 +4,17 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from helpers import make_system
+from reference_posteriors import load, reference_card, reference_system
+from scipy import integrate, stats
+from test_reference_posteriors import our_figures
+
 from bayes_sys.model.blocks import correlation as correlation_block
 from bayes_sys.model.conditional import conditional_coefficients
 from bayes_sys.prior.cards import build_card
 from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
 from bayes_sys.prior.resolve import resolve
 from bayes_sys.sampling.engine import sample
-from helpers import make_system
-from reference_posteriors import load, reference_card, reference_system
-from scipy import integrate, stats
-from test_reference_posteriors import our_figures
 
 
 def fixed_covariance_row(name: str) -> dict:
@@ -56,7 +57,9 @@ def test_shrinkage_is_the_conditional_variance_over_the_prior_variance() -> None
     law = conditional_coefficients(
         system.factor, prior, np.zeros(6), root, np.empty((1, 0)), np.random.default_rng(0)
     )
-    closed_form = np.square(list(row["post_sd"].values())) / np.square(np.concatenate(case["prior"]["beta_sd"]))
+    closed_form = np.square(list(row["post_sd"].values())) / np.square(
+        np.concatenate(case["prior"]["beta_sd"])
+    )
     np.testing.assert_allclose(law.shrinkage[0], closed_form, rtol=1e-9)
     assert ((law.shrinkage > 0) & (law.shrinkage <= 1)).all()
 
@@ -101,7 +104,9 @@ def test_one_equation_matches_quadrature_over_its_scale(scales: dict, density: o
 
     def unnormalised(s: float) -> float:
         covariance = s**2 * np.eye(len(y)) + (x * tau**2) @ x.T
-        return float(np.exp(stats.multivariate_normal(np.zeros(len(y)), covariance).logpdf(y) + log_density(s)))
+        return float(
+            np.exp(stats.multivariate_normal(np.zeros(len(y)), covariance).logpdf(y) + log_density(s))
+        )
 
     def conditional(s: float) -> tuple[np.ndarray, np.ndarray]:
         variance = np.linalg.inv(x.T @ x / s**2 + np.diag(1 / tau**2))

@@ -8,11 +8,12 @@ distance in posterior standard deviations falls as T^(-1/2).
 from __future__ import annotations
 
 import numpy as np
+from helpers import make_system
+
 from bayes_sys.classical.estimators import classical_estimates
 from bayes_sys.prior.cards import PriorCard, build_card
 from bayes_sys.sampling.engine import sample
 from bayes_sys.system.system import System
-from helpers import make_system
 
 SIZES = (100, 1_000, 10_000, 100_000)
 REPLICATES = 20
@@ -28,7 +29,9 @@ def simulated_system(periods: int, seed: int) -> System:
     root = np.linalg.cholesky(np.outer(SCALES, SCALES) * CORRELATION)
     errors = rng.standard_normal((periods, N)) @ root.T
     designs = [np.column_stack([np.ones(periods), rng.standard_normal((periods, P - 1))]) for _ in range(N)]
-    return make_system(designs, np.column_stack([x @ b for x, b in zip(designs, TRUTH, strict=True)]) + errors)
+    return make_system(
+        designs, np.column_stack([x @ b for x, b in zip(designs, TRUTH, strict=True)]) + errors
+    )
 
 
 def strong_card() -> PriorCard:

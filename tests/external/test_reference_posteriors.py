@@ -7,9 +7,10 @@ from typing import Any
 import numpy as np
 import pytest
 from arviz_stats.base import array_stats
+from reference_posteriors import load, named_draws, reference_card, reference_system
+
 from bayes_sys.sampling.engine import sample
 from bayes_sys.sampling.gate import Limits, hold
-from reference_posteriors import load, named_draws, reference_card, reference_system
 
 AXES = {"chain_axis": 0, "draw_axis": 1}
 QUANTILES = {"q05": 0.05, "q50": 0.5, "q95": 0.95}

@@ -12,6 +12,8 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
+
 from bayes_sys.model.blocks import coefficients as coefficient_block
 from bayes_sys.model.blocks import correlation as correlation_block
 from bayes_sys.model.compiled import value_and_gradient
@@ -19,7 +21,6 @@ from bayes_sys.model.density import covariance_roots, pack
 from bayes_sys.model.factory import assemble
 from bayes_sys.prior.law import Prior
 from bayes_sys.system.system import System
-from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
 

@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
-from bayes_sys.system.system import System
 from helpers import make_system
 from pymc_identity import Identity
+
+from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
+from bayes_sys.system.system import System
 
 FAMILIES = ("half_normal", "half_student_t", "exponential", "lognormal")
 SHAPES = {"half_normal": 0.0, "half_student_t": 4.0, "exponential": 0.0, "lognormal": 0.6}
@@ -15,7 +16,9 @@ SHAPES = {"half_normal": 0.0, "half_student_t": 4.0, "exponential": 0.0, "lognor
 
 def invented_system(n: int, periods: int, p: int, seed: int, centre: float = 0.0) -> System:
     rng = np.random.default_rng(seed)
-    designs = [np.column_stack([np.ones(periods), centre + rng.normal(size=(periods, p - 1))]) for _ in range(n)]
+    designs = [
+        np.column_stack([np.ones(periods), centre + rng.normal(size=(periods, p - 1))]) for _ in range(n)
+    ]
     shared = rng.normal(size=(periods, 1))
     responses = np.column_stack([x @ rng.normal(size=p) for x in designs])
     return make_system(designs, responses + 0.7 * shared + 0.5 * rng.normal(size=(periods, n)))

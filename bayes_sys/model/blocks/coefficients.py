@@ -56,8 +56,8 @@ def forward(v: Array, members: Array, groups: Array, scale: Array, by_score: Arr
     by_score : array of float, shape (n_groups,), written
     """
     total = 0.0
-    for g in range(groups.shape[0]):
-        total -= 0.5 * v[g] * v[g]
+    for score in v:
+        total -= 0.5 * score * score
     for k in range(members.shape[0]):
         scale[k] = members[k, 0]
     for g in range(groups.shape[0]):
@@ -82,7 +82,8 @@ def backward(v: Array, members: Array, by_log_scale: Array, by_score: Array, gra
 
 def spreads(law: CoefficientLaw, scores: Array) -> Array:
     """Return the spread of every pooled group from its normal scores, shape (..., n_groups)."""
-    return half_normal_values(scores) * np.array([g.spread_scale for g in law.groups])
+    scale = np.array([g.spread_scale for g in law.groups])
+    return np.asarray(half_normal_values(scores) * scale)
 
 
 def scale_columns(law: CoefficientLaw, spread: Array) -> Array:

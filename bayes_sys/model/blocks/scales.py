@@ -46,7 +46,9 @@ def log_density(code: float, size: float, shape: float, scale: float) -> tuple[f
 def log_constants(law: ScaleLaw) -> Array:
     """Return what ``log_density`` leaves out, shape (n_equations,)."""
     size, shape = law.size, np.where(law.shape > 0, law.shape, 1.0)
-    student = gammaln(0.5 * (shape + 1)) - gammaln(0.5 * shape) - 0.5 * np.log(np.pi * shape) + np.log(2 / size)
+    student = (
+        gammaln(0.5 * (shape + 1)) - gammaln(0.5 * shape) - 0.5 * np.log(np.pi * shape) + np.log(2 / size)
+    )
     constants = {
         "half_normal": 0.5 * np.log(2 / np.pi) - np.log(size),
         "half_student_t": student,
@@ -90,7 +92,8 @@ def declare(law: ScaleLaw) -> Any:
     families = set(law.family)
     if len(families) == 1:
         return _family(families.pop(), law.size, law.shape)(VARIABLE, dims="equation")
-    parts, order = [], []
+    parts: list[Any] = []
+    order: list[int] = []
     for family in sorted(families):
         members = np.flatnonzero([f == family for f in law.family])
         make = _family(family, law.size[members], law.shape[members])

@@ -96,7 +96,9 @@ def backward(
     gradient : array of float, shape (n (n + 1) / 2,), written
     """
     n = scales.shape[0]
-    pull = np.zeros((n, n))  # derivative in W; through the scales it is -(L' C Sigma), C = diag(by_log_scale / D^2)
+    pull = np.zeros(
+        (n, n)
+    )  # derivative in W; through the scales it is -(L' C Sigma), C = diag(by_log_scale / D^2)
     for i in range(n):
         c = by_log_scale[i] / (scales[i] * scales[i])
         for b in range(i + 1):
