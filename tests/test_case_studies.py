@@ -98,5 +98,5 @@ def test_every_file_a_reader_needs_is_there_and_says_that_it_is_invented(case: s
 
 def test_district_water_compares_the_three_cards() -> None:
     study = read_study(CASES / "district_water" / "study.toml")
-    assert study.prior.card == "weakly-informative"
+    assert study.prior.card == "pooled"
     assert study.compare.cards == ("vague", "weakly-informative", "pooled")

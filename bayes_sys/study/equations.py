@@ -111,8 +111,9 @@ def _check_plan(study: Study, plan: EquationPlan) -> None:
 def wide_equations(study: Study, columns: Iterable[str]) -> tuple[str, ...]:
     """Return the equations of a wide table.
 
-    They are ``data.units`` if given, else the ``[equation.*]`` tables, else whatever stands in the place of
-    ``{equation}`` in the columns that hold the response.
+    They are ``data.units`` if given; else whatever stands in the place of ``{equation}`` in the columns that
+    hold the response, and after them every further ``[equation.*]`` table that has a response; without a
+    placeholder, the ``[equation.*]`` tables.
 
     Raises
     ------
@@ -121,30 +122,41 @@ def wide_equations(study: Study, columns: Iterable[str]) -> tuple[str, ...]:
     """
     if study.data.units is not None:
         return study.data.units
-    if study.equation:
-        return tuple(study.equation)
     pattern = _raw_pattern(study, study.every_equation.response)
     if pattern is None or pattern == PLACEHOLDER:
+        if study.equation:
+            return tuple(study.equation)
         raise StudyError(
             "nothing says which equations there are.",
             where=study.at("data"),
             mend='Add units = ["…", "…"] under [data] (or unit = "…" if each row is one unit and period), '
             'or use “{equation}” in every_equation.response, such as response = "{equation}_demand".',
         )
+    columns = list(columns)
+    found = _matching(study, pattern, columns)
+    own = [
+        name
+        for name, spec in study.equation.items()
+        if spec.response is not None or expand(pattern, name) in columns
+    ]
+    if not found and not own:
+        raise StudyError(
+            f"no column fits the response “{pattern}”.",
+            where=study.at("every_equation.response"),
+            mend=nearest(pattern, columns),
+        )
+    return tuple(dict.fromkeys([*found, *own]))
+
+
+def _matching(study: Study, pattern: str, columns: Iterable[str]) -> list[str]:
+    """Return what stands in the place of ``{equation}`` in the columns that fit the response."""
     before, _, after = pattern.partition(PLACEHOLDER)
     # A second placeholder in one name must stand for the same equation.
     shape = re.compile(
         f"{re.escape(before)}(?P<e>.+?){re.escape(after).replace(re.escape(PLACEHOLDER), '(?P=e)')}"
     )
     literal = {name for name, _ in written_columns(study) if PLACEHOLDER not in name} | {study.data.period}
-    found = [m["e"] for c in columns if c not in literal and (m := shape.fullmatch(c))]
-    if not found:
-        raise StudyError(
-            f"no column fits the response “{pattern}”.",
-            where=study.at("every_equation.response"),
-            mend=nearest(pattern, columns),
-        )
-    return tuple(found)
+    return [m["e"] for c in columns if c not in literal and (m := shape.fullmatch(c))]
 
 
 def _raw_pattern(study: Study, name: str | None) -> str | None:

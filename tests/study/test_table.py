@@ -179,6 +179,30 @@ def test_wide_equations_stand_in_their_own_tables_or_in_units() -> None:
     assert panel.equations == ("alder",)
 
 
+def test_one_table_of_its_own_leaves_the_other_wide_equations_in() -> None:
+    equations = {"response": "{equation}_bread", "regressors": [{"name": "p", "column": "{equation}_price"}]}
+    alone = {"birch": {"regressors": []}}
+    panel = panel_of(wide_of(LONG), data={"unit": None}, every_equation=equations, equation=alone)
+    assert set(panel.equations) == {"alder", "birch", "St. John"}
+
+
+def test_a_wide_equation_outside_the_pattern_joins_by_a_response_of_its_own() -> None:
+    wide = wide_of(LONG).assign(all_loaves=[1.0, 2.0, 3.0, 4.0])
+    equations = {"response": "{equation}_bread", "regressors": [{"name": "p", "column": "{equation}_price"}]}
+    whole = {"whole": {"response": "all_loaves", "regressors": ["alder_price"]}}
+    panel = panel_of(wide, data={"unit": None}, every_equation=equations, equation=whole)
+    assert panel.equations[-1] == "whole"
+    assert len(panel.equations) == 4
+
+
+def test_a_misspelt_wide_equation_is_named_with_the_nearest() -> None:
+    equations = {"response": "{equation}_bread", "regressors": [{"name": "p", "column": "{equation}_price"}]}
+    with pytest.raises(StudyError, match=r"“brich”.*“birch”"):
+        panel_of(
+            wide_of(LONG), data={"unit": None}, every_equation=equations, equation={"brich": {"intercept": False}}
+        )
+
+
 def test_a_placeholder_works_in_the_long_layout_too() -> None:
     table = LONG.assign(**{"birch_heat": 1.0, "alder_heat": 2.0, "St. John_heat": 3.0})
     equations = {"response": "bread", "regressors": [{"name": "heat", "column": "h"}]}
