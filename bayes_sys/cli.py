@@ -141,7 +141,7 @@ def build_parser() -> tuple[Parser, dict[str, Parser]]:
         epilog=CODES,
         allow_abbrev=False,
     )
-    places = parser.add_subparsers(metavar="COMMAND", dest="command_name", required=True)
+    places = parser.add_subparsers(title="commands", metavar="COMMAND", dest="command_name", required=True)
     parsers = {}
     for work, more, options in (
         (
