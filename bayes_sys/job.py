@@ -381,5 +381,5 @@ def write_page(folder: RunFolder, manifest: Mapping[str, Any]) -> Path:
 
     # What making the page takes cannot stand on it; without it the page is the same each time it is made.
     timings = {k: v for k, v in manifest["timings"].items() if k not in ("page", "total")}
-    content = load_content(folder.path, manifest={**manifest, "timings": timings})
+    content = load_content(folder.path, manifest=runs.plain({**manifest, "timings": timings}))
     return folder.write_text(runs.REPORT, page(content))

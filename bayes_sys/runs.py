@@ -320,9 +320,12 @@ def sha256(content: bytes | Path) -> str:
 
 
 def plain(value: Any) -> Any:
-    """Return a value as JSON knows it: numpy numbers and arrays unpacked, NaN and infinities as None."""
+    """Return a value as a JSON file of ours gives it back.
+
+    Keys are sorted, numpy numbers and arrays unpacked; NaN and infinities become None.
+    """
     if isinstance(value, Mapping):
-        return {str(k): plain(v) for k, v in value.items()}
+        return {str(k): plain(v) for k, v in sorted(value.items())}
     if isinstance(value, list | tuple | set | frozenset):
         return [plain(v) for v in (sorted(value) if isinstance(value, set | frozenset) else value)]
     if hasattr(value, "tolist"):

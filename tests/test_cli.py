@@ -163,7 +163,7 @@ def test_the_manifest_says_what_a_repetition_needs(finished: tuple[Path, Said]) 
     assert manifest["timings"].keys() == {"read", "examine", "sample", "tables", "page", "total"}
     parts = [seconds for name, seconds in manifest["timings"].items() if name != "total"]
     assert sum(parts) == pytest.approx(manifest["timings"]["total"], abs=0.1)
-    assert manifest["card"]["name"] == "weakly-informative" and manifest["prior_words"]
+    assert manifest["card"]["name"] == "pooled" and manifest["prior_words"]
     assert "iterated" in manifest["reasons"]
 
 
@@ -180,7 +180,7 @@ def test_the_effective_card_reproduces_the_run(
     finished: tuple[Path, Said], call: Execute, study: Path
 ) -> None:
     shutil.copy(finished[0] / "prior.toml", study.parent / "prior.toml")
-    edit(study, 'card = "weakly-informative"', 'card = "prior.toml"')
+    edit(study, 'card = "pooled"', 'card = "prior.toml"')
     assert call("run", study, "--out", "again", "--quiet").code == 0
 
     def means(place: Path) -> list[float]:
@@ -270,7 +270,7 @@ def no_such_key(study: Path) -> list[object]:
 
 
 def no_such_card(study: Path) -> list[object]:
-    edit(study, 'card = "weakly-informative"', 'card = "weakly-informativ"')
+    edit(study, 'card = "pooled"', 'card = "pooledd"')
     return ["run", study]
 
 
@@ -299,7 +299,7 @@ WRONG: list[tuple[str, Callable[[Path], list[object]], str]] = [
     ("not TOML", not_toml, "study.toml"),
     ("unknown key", no_such_key, "chains"),
     ("unknown regressor", no_such_regressor, "log_tariff"),
-    ("unknown card", no_such_card, "weakly-informative"),
+    ("unknown card", no_such_card, "pooled"),
     ("not built yet", not_built, "ar1"),
     ("no data", no_data, "demand.csv"),
     ("one chain", lambda s: ["run", s, "--chains", 1], "chains"),
