@@ -81,15 +81,16 @@ class _Bars:
 
     def __call__(self, progress: Progress) -> None:
         """Show one moment."""
+        again = ", second attempt" if progress.attempt > 1 else ""
+        words = STAGES.get(progress.stage, progress.stage) + again
         line = ("sampling" if progress.stage in ONE_BAR else progress.stage, progress.attempt)
         if line != self.line:
             self.finish()
             self.line = line
-            self.task = self.bars.add_task("", total=None, detail="")
-        again = ", second attempt" if progress.attempt > 1 else ""
+            self.task = self.bars.add_task(words, total=None, detail="")
         self.bars.update(
             self.task,
-            description=STAGES.get(progress.stage, progress.stage) + again,
+            description=words,
             completed=progress.done,
             total=progress.total or None,
             detail=_detail(progress),
