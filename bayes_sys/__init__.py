@@ -39,6 +39,7 @@ if TYPE_CHECKING:
     from bayes_sys.runs import open_run
     from bayes_sys.sampling.engine import sample
     from bayes_sys.sampling.gate import Limits, Verdict, hold, sample_until_passed
+    from bayes_sys.sampling.graph import complete
     from bayes_sys.sampling.progress import Progress
     from bayes_sys.shipped import card_names, case_study
     from bayes_sys.study.read import make_study, read_study
@@ -77,6 +78,7 @@ _HOMES = {
     "bayes_sys.runs": ("open_run",),
     "bayes_sys.sampling.engine": ("sample",),
     "bayes_sys.sampling.gate": ("Limits", "Verdict", "hold", "sample_until_passed"),
+    "bayes_sys.sampling.graph": ("complete",),
     "bayes_sys.sampling.progress": ("Progress",),
     "bayes_sys.shipped": ("card_names", "case_study"),
     "bayes_sys.study.read": ("make_study", "read_study"),
@@ -110,6 +112,7 @@ __all__ = [
     "case_study",
     "classical_estimates",
     "coefficient_table",
+    "complete",
     "correlation_table",
     "describe",
     "effective_card",

@@ -81,6 +81,26 @@ def test_shrinkage_of_a_pooled_coefficient_is_its_pooling_factor() -> None:
     np.testing.assert_allclose(result.shrinkage[0], 1 / (1 + tau**2 * information), rtol=1e-12)
 
 
+def test_with_identical_regressors_the_posterior_need_not_equal_ols() -> None:
+    # FGLS then equals OLS whatever the covariance (Zellner 1962); a prior that is not a multiple of the
+    # regressors' information breaks the tie, and what one equation says moves the other
+    rng = np.random.default_rng(4)
+    x = np.column_stack([np.ones(20), rng.normal(size=20)])
+    system = make_system([x, x], x @ [[1.0, -1.0], [0.5, 0.2]] + rng.normal(size=(20, 2)))
+    law = CoefficientLaw(np.eye(4), np.zeros(4), np.array([5.0, 0.1, 5.0, 5.0]), np.full(4, -1))
+    prior = Prior(law, ScaleLaw(("half_normal",) * 2, np.ones(2), np.zeros(2)), CorrelationLaw(2.0))
+    means = []
+    for correlation in (0.0, 0.8):
+        root = np.linalg.cholesky([[1.0, correlation], [correlation, 1.0]])[None]
+        result = conditional_coefficients(
+            system.factor, prior, np.zeros(4), root, np.empty((1, 0)), np.random.default_rng(0)
+        )
+        means.append(result.mean[0])
+    ols = np.linalg.lstsq(x, system.responses, rcond=None)[0].T.ravel()
+    assert abs(means[0][3] - ols[3]) < 0.01  # without correlation the loose coefficient stays at OLS
+    assert abs(means[1][3] - ols[3]) > 0.1  # with it, the tight prior of the other equation reaches over
+
+
 def one_equation() -> tuple[np.ndarray, np.ndarray]:
     rng = np.random.default_rng(11)
     x = np.column_stack([np.ones(9), rng.normal(size=9)])

@@ -9,8 +9,11 @@ import pytest
 from arviz_stats.base import array_stats
 from reference_posteriors import load, named_draws, reference_card, reference_system
 
+from bayes_sys.model.factory import build_model
+from bayes_sys.posterior.tables import coefficient_table
 from bayes_sys.sampling.engine import sample
 from bayes_sys.sampling.gate import Limits, hold
+from bayes_sys.sampling.graph import complete
 
 AXES = {"chain_axis": 0, "draw_axis": 1}
 QUANTILES = {"q05": 0.05, "q50": 0.5, "q95": 0.95}
@@ -52,6 +55,27 @@ def test_direct_engine_matches_the_reference_posterior(name: str) -> None:
 
 def test_pymc_engine_matches_the_reference_posterior() -> None:
     check_against(load("grun2"), "pymc", draws=12_000)
+
+
+@pytest.mark.slow
+def test_a_users_own_draws_from_the_model_are_completed() -> None:
+    import pymc as pm
+
+    case = load("grun2")
+    system = reference_system(case)
+    card = reference_card(case, system)
+    with build_model(system, card):
+        tree = pm.sample(
+            draws=1000, random_seed=3, nuts_sampler="nutpie", progressbar=False, target_accept=0.95
+        )
+    posterior = complete(tree, system, card)
+    assert hold(posterior, Limits(ess=400)).passed
+    table = coefficient_table(posterior, system)
+    assert table["shrinkage"].between(0, 1).all()
+    assert posterior["log_likelihood"]["responses"].dims == ("chain", "draw", "period")
+    for name, values in named_draws(posterior, system).items():
+        mean, error = our_figures(values)["mean"]
+        assert abs(mean - case["results"][name]["mean"]) <= 4 * error
 
 
 @pytest.mark.slow
