@@ -5,12 +5,15 @@ Exit codes: 0 done; 2 the input is wrong; 3 the posterior did not pass the gate;
 
 from __future__ import annotations
 
+import _thread
 import argparse
 import io
 import json
 import os
 import shlex
+import signal
 import sys
+import threading
 import warnings
 from collections.abc import Mapping, Sequence
 from contextlib import redirect_stdout
@@ -29,6 +32,7 @@ INTERRUPTED = (
     "Interrupted. A run that had begun stays marked as incomplete; the same command starts it again."
 )
 CODES = "Exit codes: 0 done; 2 the input is wrong; 3 the posterior did not pass the gate; 1 anything else."
+_INTERRUPTED = threading.Event()
 
 
 @dataclass(frozen=True)
@@ -237,7 +241,12 @@ def parse(arguments: Sequence[str]) -> argparse.Namespace:
 def main() -> None:
     """Run the command line and leave with its exit code."""
     prepare_process()
-    sys.exit(execute(sys.argv[1:]))
+    code = execute(sys.argv[1:])
+    for stream in (sys.stdout, sys.stderr):
+        stream.flush()
+    # At once, because an interrupt that a library has seen on its way would still decide the exit code, and
+    # because threads of the sampler need not be waited for. Everything written is closed by now.
+    os._exit(code)
 
 
 def prepare_process() -> None:
@@ -254,6 +263,22 @@ def prepare_process() -> None:
     for stream in (sys.stdout, sys.stderr):
         if isinstance(stream, io.TextIOWrapper):
             stream.reconfigure(errors="replace")
+    signal.signal(signal.SIGINT, _interrupt)
+    sys.unraisablehook = _reraise_interrupt
+
+
+def _interrupt(number: int, frame: object) -> NoReturn:
+    """Remember an interrupt and raise it."""
+    _INTERRUPTED.set()
+    raise KeyboardInterrupt
+
+
+def _reraise_interrupt(lost: Any) -> None:
+    """Raise an interrupt again, a moment later, that fell into a place where Python drops exceptions."""
+    if lost.exc_type is KeyboardInterrupt:
+        threading.Timer(0.05, _thread.interrupt_main).start()
+    else:
+        sys.__unraisablehook__(lost)
 
 
 def execute(arguments: Sequence[str]) -> int:
@@ -299,11 +324,14 @@ def _answer(arguments: Sequence[str]) -> Answer | None:
         return Answer(status, messages=[str(error)], exit_code=error.exit_code)
     except KeyboardInterrupt:
         return Answer("interrupted", messages=[INTERRUPTED], exit_code=FAULT)
-    except Exception as error:
+    except BaseException as error:  # a panic of a library in Rust is no Exception
+        if _INTERRUPTED.is_set():
+            # Some libraries turn an interrupt into an error of their own, such as a failed import.
+            return Answer("interrupted", messages=[INTERRUPTED], exit_code=FAULT)
         return _unexpected(error)
 
 
-def _unexpected(error: Exception) -> Answer:
+def _unexpected(error: BaseException) -> Answer:
     """Return the one line that an error nobody foresaw comes to."""
     if os.environ.get(DEBUG):
         import traceback

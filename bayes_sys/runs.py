@@ -12,7 +12,7 @@ import json
 import math
 import shutil
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -239,16 +239,23 @@ def begin_run(
         As `check_place`, and if another process is writing to the folder.
     """
     place = check_place(path, overwrite=overwrite)
+    is_new = not place.exists()
     with naming(place, "write"):
         place.mkdir(parents=True, exist_ok=True)
-    with locked(place):
-        # Once more under the lock: another process may have finished its run here in the meantime.
-        check_place(place, overwrite=overwrite)
-        run = RunFolder(place)
-        # The mark first: a crash while clearing must not leave half a run that says “complete”.
-        run.write_json(MANIFEST, {**manifest, "status": INCOMPLETE})
-        _clear(place)
-        yield run
+    try:
+        with locked(place):
+            # Once more under the lock: another process may have finished its run here in the meantime.
+            check_place(place, overwrite=overwrite)
+            run = RunFolder(place)
+            # The mark first: a crash while clearing must not leave half a run that says “complete”.
+            run.write_json(MANIFEST, {**manifest, "status": INCOMPLETE})
+            _clear(place)
+            yield run
+    finally:
+        if is_new:
+            # Only succeeds where not even the manifest came to be written.
+            with suppress(OSError):
+                place.rmdir()
 
 
 def save_examination(

@@ -187,6 +187,18 @@ def test_no_sooner_is_the_old_run_cleared_than_it_stops_saying_complete(
     assert open_run(tmp_path / "run").manifest()["status"] == runs.INCOMPLETE
 
 
+def test_an_interrupt_before_the_manifest_leaves_no_folder(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def interrupt(*arguments: object) -> None:
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(RunFolder, "write_json", interrupt)
+    with pytest.raises(KeyboardInterrupt), begin_run(tmp_path / "run", manifest=MANIFEST):
+        pass
+    assert list(tmp_path.iterdir()) == []
+
+
 # Places
 
 

@@ -199,7 +199,10 @@ def test_a_misspelt_wide_equation_is_named_with_the_nearest() -> None:
     equations = {"response": "{equation}_bread", "regressors": [{"name": "p", "column": "{equation}_price"}]}
     with pytest.raises(StudyError, match=r"“brich”.*“birch”"):
         panel_of(
-            wide_of(LONG), data={"unit": None}, every_equation=equations, equation={"brich": {"intercept": False}}
+            wide_of(LONG),
+            data={"unit": None},
+            every_equation=equations,
+            equation={"brich": {"intercept": False}},
         )
 
 
