@@ -406,7 +406,7 @@ def test_something_that_is_no_mapping_is_refused() -> None:
         (b"[data\n", "line 1"),
         (b"[data]\nperiod = 'y'\nperiod = 'z'\n", "line 3"),
         (b"year,town,bread\n2004,Alder,3\n", "data file"),
-        (b"a = " + b"[" * 2000 + b"]" * 2000, "nested"),
+        (b"a = " + b"[" * 200_000 + b"]" * 200_000, "nested"),
     ],
 )
 def test_a_file_that_is_no_study_is_refused_with_its_line(tmp_path: Path, raw: bytes, said: str) -> None:
