@@ -32,7 +32,7 @@ STAGES = {
     "page": "Making the page",
 }
 ONE_BAR = ("warmup", "sampling")
-MOST_ROWS, MOST_COLUMNS = 40, 6
+MOST_ROWS, MOST_COLUMNS, MOST_PAIRS = 40, 6, 10
 WIDEST = 110
 MARKS = {FINE: "", NOTE: "*", WARNING: "!"}
 CAUTION = (
@@ -120,8 +120,9 @@ def run_text(run: Run) -> str:
         "",
         *gate_lines(manifest["gate"]),
         "",
-        *coefficient_lines(run.coefficients),
+        *coefficient_lines(run.tables[runs.COEFFICIENTS]),
         "",
+        *correlation_lines(run.tables[runs.CORRELATIONS]),
         *(["What to mind", *points(said), ""] if said else []),
         *wrapped(CAUTION),
         "",
@@ -155,6 +156,20 @@ def coefficient_lines(table: pd.DataFrame) -> list[str]:
     if len(table) > MOST_ROWS:
         lines.append(f"… and {len(table) - MOST_ROWS} more in {runs.COEFFICIENTS}")
     return lines
+
+
+def correlation_lines(table: pd.DataFrame) -> list[str]:
+    """Return the largest correlations of the errors as lines of text, `MOST_PAIRS` of them; none for one equation."""
+    if table.empty:
+        return []
+    columns = {"equation_a": "", "equation_b": "", "mean": "mean", "q5": "5%", "q95": "95%", "fgls": "FGLS"}
+    largest = table.iloc[table["mean"].abs().argsort(kind="stable")[::-1][:MOST_PAIRS]]
+    cells = [list(columns.values())]
+    cells += [[_number(row[name]) for name in columns] for row in largest.to_dict("records")]
+    title = "Correlation of the errors"
+    if len(table) > MOST_PAIRS:
+        title += f", the {MOST_PAIRS} largest of {len(table)} ({runs.CORRELATIONS} has all)"
+    return [title, *aligned(cells, left=2), ""]
 
 
 def examination_text(examination: Examination) -> str:

@@ -112,14 +112,14 @@ class Run:
     folder : RunFolder
     manifest : mapping
         As in ``manifest.json``.
-    coefficients : DataFrame
-        As in ``coefficients.csv``.
+    tables : mapping of str to DataFrame
+        By the names of their files in the folder.
     prepared : Prepared
     """
 
     folder: RunFolder
     manifest: Mapping[str, Any]
-    coefficients: pd.DataFrame
+    tables: Mapping[str, pd.DataFrame]
     prepared: Prepared
 
     @property
@@ -222,14 +222,14 @@ def run(
         manifest |= closing(outcome, limits)
         clock.lap("sample")
         progress(Progress("tables"))
-        coefficients = write_results(folder, prepared, outcome)
+        tables = write_results(folder, prepared, outcome)
         clock.lap("tables")
         progress(Progress("page"))
         write_page(folder, {**manifest, "timings": clock.timings})
         clock.lap("page")
         manifest["timings"] = clock.timings
         folder.write_json(runs.MANIFEST, manifest)
-    return Run(folder, manifest, coefficients, prepared)
+    return Run(folder, manifest, tables, prepared)
 
 
 def report(run_folder: str | Path, *, progress: Watcher = unwatched) -> Page:
@@ -357,21 +357,28 @@ def write_inputs(folder: RunFolder, prepared: Prepared) -> None:
     folder.write_table(runs.BENCHMARK, benchmark_table(prepared.benchmark, prepared.system))
 
 
-def write_results(folder: RunFolder, prepared: Prepared, outcome: Outcome) -> pd.DataFrame:
-    """Write the draws and every table; return the coefficients."""
+def write_results(folder: RunFolder, prepared: Prepared, outcome: Outcome) -> dict[str, pd.DataFrame]:
+    """Write the draws and every table; return the tables by the names of their files."""
     from bayes_sys.posterior import checks, tables
+    from bayes_sys.posterior.predictive import predictive_band
 
     posterior, system = outcome.posterior, prepared.system
     folder.write_posterior(posterior)
-    coefficients = tables.coefficient_table(posterior, system)
-    folder.write_table(runs.COEFFICIENTS, coefficients)
-    folder.write_table(runs.SCALES, tables.scale_table(posterior, system))
-    folder.write_table(runs.CORRELATIONS, tables.correlation_table(posterior, system))
-    folder.write_table(runs.FITTED, tables.fitted_table(posterior, system))
-    folder.write_table(runs.EQUATIONS, tables.equation_table(posterior, system))
-    seed = prepared.study.sampling.seed
-    folder.write_table(runs.CHECKS, checks.predictive_checks(posterior, system, seed))
-    return coefficients
+    benchmark, band = prepared.benchmark, predictive_band(posterior, system)
+    written = {
+        runs.COEFFICIENTS: tables.coefficient_table(posterior, system, benchmark=benchmark),
+        runs.SCALES: tables.scale_table(posterior, system, benchmark=benchmark),
+        runs.CORRELATIONS: tables.correlation_table(posterior, system, benchmark=benchmark),
+        runs.FITTED: tables.fitted_table(posterior, system, band=band),
+        runs.EQUATIONS: tables.equation_table(posterior, system),
+        runs.CHECKS: checks.predictive_checks(posterior, system, prepared.study.sampling.seed, band=band[1:]),
+    }
+    pooled = tables.pooled_table(posterior)
+    if len(pooled):
+        written[runs.POOLED] = pooled
+    for name, table in written.items():
+        folder.write_table(name, table)
+    return written
 
 
 def write_page(folder: RunFolder, manifest: Mapping[str, Any]) -> Path:

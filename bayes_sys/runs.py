@@ -31,7 +31,8 @@ MANIFEST = "manifest.json"
 STUDY, PRIOR, EXAMINATION = "study.toml", "prior.toml", "examination.json"
 BENCHMARK, COEFFICIENTS, SCALES = "benchmark.csv", "coefficients.csv", "scales.csv"
 CORRELATIONS, FITTED, EQUATIONS = "correlations.csv", "fitted.csv", "equations.csv"
-CHECKS, POSTERIOR, REPORT = "checks.csv", "posterior.nc", "report.html"
+CHECKS, POOLED = "checks.csv", "pooled.csv"
+POSTERIOR, REPORT = "posterior.nc", "report.html"
 
 EXAMINATION_FILES = (EXAMINATION, BENCHMARK)
 RESULT_FILES = (
@@ -45,6 +46,7 @@ RESULT_FILES = (
     FITTED,
     EQUATIONS,
     CHECKS,
+    POOLED,
     POSTERIOR,
     REPORT,
     "contrasts.csv",

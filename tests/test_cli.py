@@ -118,7 +118,7 @@ def test_a_run_ends_with_its_folder_and_says_nothing_on_standard_error(finished:
 def test_a_run_folder_holds_every_file_of_the_contract(finished: tuple[Path, Said]) -> None:
     names = (
         "manifest.json study.toml prior.toml examination.json benchmark.csv coefficients.csv scales.csv "
-        "correlations.csv fitted.csv equations.csv checks.csv posterior.nc report.html"
+        "correlations.csv fitted.csv equations.csv checks.csv pooled.csv posterior.nc report.html"
     )
     assert sorted(p.name for p in finished[0].iterdir()) == sorted(names.split())
 

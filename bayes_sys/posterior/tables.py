@@ -162,7 +162,45 @@ def correlation_table(
     )
 
 
-def fitted_table(posterior: xr.DataTree, system: System) -> pd.DataFrame:
+def pooled_table(posterior: xr.DataTree) -> pd.DataFrame:
+    """Tabulate what pooled coefficients share: their mean, and the spread around it.
+
+    Parameters
+    ----------
+    posterior : DataTree
+
+    Returns
+    -------
+    DataFrame
+        ``regressor, quantity, mean, sd, q5, q50, q95, prob_positive, rhat, ess_bulk, ess_tail``, two rows a
+        regressor, ``quantity`` "shared mean" or "spread", in the unit in which the card states each member;
+        without rows when nothing is pooled.
+    """
+    import pandas as pd
+
+    group = posterior["posterior"].to_dataset()
+    parts = []
+    for quantity, name in (("shared mean", "pooled_mean"), ("spread", "pooled_spread")):
+        found = name in group
+        ours = summarise(draws_of(posterior, name)) if found else _empty_summary()
+        regressors = [str(label) for label in group["pooled"].values] if found else []
+        parts.append(
+            pd.DataFrame(
+                {
+                    "regressor": regressors,
+                    "quantity": [quantity] * len(regressors),
+                    **_moments(ours),
+                    "prob_positive": ours.prob_positive,
+                    **_convergence(ours),
+                }
+            )
+        )
+    return pd.concat(parts).sort_index(kind="stable").reset_index(drop=True)
+
+
+def fitted_table(
+    posterior: xr.DataTree, system: System, *, band: tuple[Array, Array, Array] | None = None
+) -> pd.DataFrame:
     """Tabulate each outcome beside its fit.
 
     ``mean`` is the posterior mean of the regression ``X beta``. ``q5`` and ``q95`` bound the 90% predictive
@@ -175,6 +213,8 @@ def fitted_table(posterior: xr.DataTree, system: System) -> pd.DataFrame:
     ----------
     posterior : DataTree
     system : System
+    band : tuple of three arrays of float, each of shape (n_periods, n_equations), optional
+        What `predictive_band` returns, if it is at hand.
 
     Returns
     -------
@@ -184,7 +224,7 @@ def fitted_table(posterior: xr.DataTree, system: System) -> pd.DataFrame:
     """
     import pandas as pd
 
-    mean, low, high = predictive_band(posterior, system)
+    mean, low, high = band if band is not None else predictive_band(posterior, system)
     n_periods, n_equations = system.responses.shape
     return pd.DataFrame(
         {

@@ -21,8 +21,19 @@ TABLES = {
     "equations": runs.EQUATIONS,
     "benchmark": runs.BENCHMARK,
     "checks": runs.CHECKS,
+    "pooled": runs.POOLED,
 }
-NAMES = ("equation", "equation_a", "equation_b", "regressor", "period", "statistic", "verdict", "sentence")
+NAMES = (
+    "equation",
+    "equation_a",
+    "equation_b",
+    "regressor",
+    "period",
+    "statistic",
+    "quantity",
+    "verdict",
+    "sentence",
+)
 """Columns that hold text, whatever it looks like: a unit may be called 007 or NA."""
 
 
@@ -41,7 +52,7 @@ class RunContent:
     examination : list of mappings
         As in ``examination.json``.
     tables : mapping of str to DataFrame
-        "coefficients", "scales", "correlations", "fitted", "equations", "benchmark", "checks"; any may be
+        "coefficients", "scales", "correlations", "fitted", "equations", "benchmark", "checks", "pooled"; any may be
         missing.
     prior_words : tuple of str
         The prior in plain sentences.

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 from bayes_sys import runs
 from bayes_sys.report.content import TABLES, RunContent
 from bayes_sys.report.grids import Grid, grid
-from bayes_sys.report.numbers import NOTHING, as_float, counted, fixed, listed
+from bayes_sys.report.numbers import NOTHING, as_float, counted, fixed, listed, number
 from bayes_sys.report.pictures import (
     MAX_PANELS,
     coefficient_pictures,
@@ -35,6 +35,7 @@ TITLES = {
     "equations": "Explained variation",
     "benchmark": "Classical benchmark",
     "checks": "Predictive checks",
+    "pooled": "What pooled coefficients share",
     "fitted": "Fitted values",
 }
 
@@ -95,6 +96,7 @@ def view(content: RunContent) -> dict[str, Any]:
         "max_panels": MAX_PANELS,
         "has_fgls": has_values(content, "coefficients", "fgls"),
         "reasons": reasons(manifest),
+        "pooled": pooled(content),
         "correlations": correlation_picture(content),
         "scales": scale_picture(content),
         "checks": surprises(content),
@@ -219,6 +221,21 @@ def surprises(content: RunContent) -> dict[str, Any]:
         "surprising": pairs,
         "unavailable": int((table["verdict"] == "not available").sum()),
     }
+
+
+def pooled(content: RunContent) -> list[tuple[str, str, str]]:
+    """Return what pooled coefficients share: regressor, shared mean, spread, each with its 90% interval."""
+    table = content.tables.get("pooled")
+    if table is None or table.empty:
+        return []
+    rows: dict[str, dict[str, str]] = {}
+    for _, row in table.iterrows():
+        interval = f"{number(row['mean'])} ({number(row['q5'])} to {number(row['q95'])})"
+        rows.setdefault(str(row["regressor"]), {})[str(row["quantity"])] = interval
+    return [
+        (name, found.get("shared mean", NOTHING), found.get("spread", NOTHING))
+        for name, found in rows.items()
+    ]
 
 
 def reasons(manifest: Mapping[str, Any]) -> list[tuple[str, str]]:

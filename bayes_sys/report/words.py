@@ -27,7 +27,8 @@ def answer(content: RunContent) -> list[str]:
     if correlations is not None and len(correlations):
         sentences.append(shared_shocks(correlations))
     if coefficients is not None and len(coefficients):
-        sentences += [signs(coefficients), who_decides(coefficients), against_classics(coefficients, content)]
+        sentences += [signs(coefficients), who_decides(coefficients, pools=_pools(content))]
+        sentences.append(against_classics(coefficients, content))
     return [sentence for sentence in sentences if sentence]
 
 
@@ -89,8 +90,16 @@ def _sign_of_one(name: str, rows: pd.DataFrame) -> str:
     return f"{name} is clearly {' and '.join(parts)} of {n} equations {means}"
 
 
-def who_decides(coefficients: pd.DataFrame) -> str:
-    """Say for which coefficients the data decide and for which the prior does."""
+def _pools(content: RunContent) -> bool:
+    pooled = content.tables.get("pooled")
+    return pooled is not None and len(pooled) > 0
+
+
+def who_decides(coefficients: pd.DataFrame, *, pools: bool = False) -> str:
+    """Say for which coefficients the data decide and for which the prior does.
+
+    Where coefficients are pooled, their prior is the mean they share, which other equations' data inform.
+    """
     known = coefficients[coefficients["shrinkage"].notna()]
     if known.empty:
         return ""
@@ -105,6 +114,11 @@ def who_decides(coefficients: pd.DataFrame) -> str:
     if prior.empty:
         return f"{start}; nowhere does the prior have the larger say."
     names = [f"{e}.{r}" for e, r in zip(prior["equation"], prior["regressor"], strict=True)]
+    if pools:
+        return (
+            f"{start}; the prior, which for pooled coefficients is the mean they share, has the larger say on "
+            f"{listed(names, 4)}: the equation's own data say little about these."
+        )
     return f"{start}; the prior has the larger say on {listed(names, 4)}: the data say little about these."
 
 

@@ -12,6 +12,8 @@ from trees import conditional_law, make_tree
 
 from bayes_sys.posterior import predictive, tables
 from bayes_sys.posterior.summary import summarise, thinned
+from bayes_sys.prior.cards import read_card
+from bayes_sys.sampling.engine import sample
 
 SCALES = np.array([0.5, 2.0])
 CORRELATION = np.array([[1.0, 0.6], [0.6, 1.0]])
@@ -246,3 +248,25 @@ def test_conditional_law_of_the_test_trees_is_generalised_least_squares_under_a_
         [np.linalg.lstsq(e.design, y)[0] for e, y in zip(system.equations, system.responses.T, strict=True)]
     )
     assert_allclose(mean, expected, rtol=1e-6)
+
+
+def test_pooled_table_has_the_shared_mean_and_spread_of_every_pooled_name() -> None:
+    rng = np.random.default_rng(8)
+    designs = [np.column_stack([np.ones(15), rng.normal(size=(15, 2))]) for _ in range(3)]
+    pooled = sample(
+        make_system(designs, rng.normal(size=(15, 3))), read_card("pooled"), warmup=200, draws=100
+    )
+    table = tables.pooled_table(pooled)
+    assert list(zip(table["regressor"], table["quantity"], strict=True)) == [
+        ("x1", "shared mean"),
+        ("x1", "spread"),
+        ("x2", "shared mean"),
+        ("x2", "spread"),
+    ]
+    spread = pooled["posterior"]["pooled_spread"].values[..., 1]
+    assert table["mean"].iloc[3] == pytest.approx(spread.mean())
+    assert table["q95"].iloc[3] == pytest.approx(np.quantile(spread, 0.95))
+
+
+def test_pooled_table_is_empty_when_nothing_is_pooled(tree: xr.DataTree) -> None:
+    assert tables.pooled_table(tree).empty

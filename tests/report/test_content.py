@@ -19,8 +19,8 @@ def folder(tmp_path):
     run.write_text(runs.STUDY, STUDY)
     run.write_text(runs.PRIOR, content.card)
     run.write_json(runs.EXAMINATION, list(EXAMINATION))
-    for name, file in TABLES.items():
-        run.write_table(file, content.tables[name])
+    for name, table in content.tables.items():
+        run.write_table(TABLES[name], table)
     return tmp_path, content
 
 

@@ -5,6 +5,7 @@ from dataclasses import replace
 from html.parser import HTMLParser
 
 import numpy as np
+import pandas as pd
 import pytest
 from contents import MANIFEST, failed, make_content
 
@@ -197,3 +198,20 @@ def test_long_tables_are_cut_and_say_where_the_rest_is(content):
 def test_thirty_equations_of_ten_thousand_periods_stay_below_three_megabytes():
     names = tuple(f"unit {i:02d}" for i in range(30))
     assert len(page(make_content(names, n_periods=10_000, n_draws=4)).encode()) < 3e6
+
+
+def test_what_pooled_coefficients_share_is_shown_only_where_something_is_pooled(content, html):
+    assert "What pooled coefficients share" not in html
+    table = pd.DataFrame(
+        {
+            "regressor": ["<b>x</b>"] * 2,
+            "quantity": ["shared mean", "spread"],
+            "mean": [-0.5512, 0.2],
+            "q5": [-0.9, 0.01],
+            "q95": [-0.1, 0.6],
+        }
+    )
+    shown = page(replace(content, tables={**content.tables, "pooled": table}))
+    assert "What pooled coefficients share" in shown
+    assert "&lt;b&gt;x&lt;/b&gt;" in shown and "<b>x</b>" not in shown
+    assert "−0.551 (−0.900 to −0.100)" in shown

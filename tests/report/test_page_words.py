@@ -57,6 +57,13 @@ def test_signs_are_counted_by_regressor_and_the_constant_is_left_out():
     assert text.index("tariff") < text.index("heat") < text.index("rain"), "the clearest first"
 
 
+def test_for_pooled_coefficients_the_prior_is_the_mean_they_share():
+    table = pd.DataFrame({"equation": ["a", "b"], "regressor": ["x", "x"], "shrinkage": [0.7, 0.05]})
+    text = words.who_decides(table, pools=True)
+    assert "the mean they share, has the larger say on a.x" in text
+    assert "own data" in text
+
+
 def test_who_decides_is_read_off_the_shares():
     share = [0.05, 0.3, 0.7, 0.9]
     table = coefficients(*((f"u{i}", "x", 0.0, -1.0, 1.0, s, 0.0) for i, s in enumerate(share)))
