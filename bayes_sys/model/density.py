@@ -1,8 +1,9 @@
 """The compiled log density: the same blocks as the PyMC model, laid together for the sampler.
 
-What is explored is the error covariance (in whitened coordinates) and the spreads of pooled groups; the
-coefficients are integrated out and drawn exactly afterwards (``conditional``). Cost does not depend on the
-number of periods.
+What is explored is the error covariance (in whitened coordinates), the spreads of pooled groups and, in one of
+two forms, the coefficients. On short series they are integrated out and drawn exactly afterwards
+(``conditional``): that is what makes hard priors sample at all. With many coefficients and periods enough,
+sampling them costs less; ``integrates`` says which. Cost does not depend on the number of periods.
 """
 
 from __future__ import annotations
@@ -19,12 +20,13 @@ from bayes_sys.model.blocks import scales as scale_block
 from bayes_sys.model.blocks import whitening
 from bayes_sys.model.kernels import kernel
 from bayes_sys.model.start import Start, first_guess
-from bayes_sys.prior.law import Prior
+from bayes_sys.prior.law import CoefficientLaw, Prior
 from bayes_sys.system.moments import Factor
 
 Array = NDArray[np.float64]
 
-HEADER = 6  # length, n_equations, n_coefficients, n_groups, n_periods, concentration
+HEADER = 7  # length, n_equations, n_coefficients, n_groups, n_periods, concentration, integrated
+MOST_INTEGRATED = 48  # coefficients; PROVISIONAL
 
 
 @dataclass(frozen=True)
@@ -36,17 +38,35 @@ class Packed:
     data : array of float, one-dimensional
         Header and sections, see ``pack``.
     n_dim : int
-        Length of the unconstrained vector: covariance coordinates, then normal scores of pooled spreads.
+        Length of the unconstrained vector: covariance coordinates, normal scores of pooled spreads; where the
+        coefficients are sampled, also standardised pooled means and whitened coefficients.
     start : Start
+    integrated : bool
+        Whether the coefficients are integrated out.
     """
 
     data: Array
     n_dim: int
     start: Start
+    integrated: bool
 
 
-def pack(factor: Factor, prior: Prior) -> Packed:
-    """Lay factor and prior out for the compiled density, about a first guess."""
+def integrates(factor: Factor) -> bool:
+    """Whether the coefficients of a system are better integrated out than sampled."""
+    return sum(len(d) for d in factor.design) <= MOST_INTEGRATED
+
+
+def pack(factor: Factor, prior: Prior, *, integrated: bool | None = None) -> Packed:
+    """Lay factor and prior out for the compiled density, about a first guess.
+
+    Parameters
+    ----------
+    factor : Factor
+    prior : Prior
+    integrated : bool, optional
+        Whether to integrate the coefficients out; what ``integrates`` says, if left out.
+    """
+    integrated = integrates(factor) if integrated is None else integrated
     law = prior.coefficients
     start = first_guess(factor, prior)
     design = factor.stacked_regressors() @ law.to_raw
@@ -63,12 +83,14 @@ def pack(factor: Factor, prior: Prior) -> Packed:
         design.T @ design,
         design.T @ residuals,
         residuals.T @ residuals,
+        start.coefficient_root,
     )
     flat = np.concatenate([np.ravel(section) for section in sections])
     header = [HEADER + len(flat), factor.n_equations, len(equation), len(groups)]
-    data = np.concatenate([header, [factor.n_periods, prior.correlation.concentration], flat])
-    n_dim = whitening.n_free(factor.n_equations) + coefficient_block.n_free(law)
-    return Packed(np.ascontiguousarray(data), n_dim, start)
+    header += [factor.n_periods, prior.correlation.concentration, float(integrated)]
+    data = np.concatenate([header, flat])
+    n_dim = whitening.n_free(factor.n_equations) + coefficient_block.n_free(law, integrated=integrated)
+    return Packed(np.ascontiguousarray(data), n_dim, start, integrated)
 
 
 @kernel
@@ -100,9 +122,12 @@ def evaluate(u: Array, gradient: Array, data: Array) -> float:
     xe = data[at : at + k * n].reshape((k, n))
     at += k * n
     ee = data[at : at + n * n].reshape((n, n))
+    at += n * n
+    coefficient_root = data[at : at + k * k].reshape((k, k))
 
     n_covariance = n * (n + 1) // 2
-    v = u[n_covariance:]
+    v = u[n_covariance : n_covariance + n_groups]
+    rest, rest_gradient = u[n_covariance + n_groups :], gradient[n_covariance + n_groups :]
     w, root, scales = np.zeros((n, n)), np.zeros((n, n)), np.empty(n)
     scale, by_log_scale, by_score = np.empty(k), np.empty(k), np.empty(n_groups)
     square = np.empty((n, n))
@@ -110,17 +135,79 @@ def evaluate(u: Array, gradient: Array, data: Array) -> float:
     log_w = whitening.forward(u, periods, guess_inverse, w, root, scales)
     value: float = whitening.log_volume(w, scales) + periods * log_w
     value += coefficient_block.forward(v, members, groups, scale, by_score)
-    value += error_block.collapsed(
-        w, scale, members, groups, centre, xx, xe, ee, equation, by_log_scale, square
-    )
+    if data[6] > 0.0:
+        value += error_block.collapsed(
+            w, scale, members, groups, centre, xx, xe, ee, equation, by_log_scale, square
+        )
+    else:
+        value += sampled(
+            rest,
+            coefficient_root,
+            w,
+            scale,
+            members,
+            groups,
+            centre,
+            xx,
+            xe,
+            ee,
+            equation,
+            by_log_scale,
+            square,
+            rest_gradient,
+        )
     if not np.isfinite(value):
         return np.nan
     by_log_d, by_log_w = np.empty(n), np.empty(n)
     value += covariance_laws(scale_laws, concentration, periods, log_w, scales, by_log_d, by_log_w)
-    coefficient_block.backward(v, members, by_log_scale, by_score, gradient[n_covariance:])
+    coefficient_block.backward(
+        v, members, by_log_scale, by_score, gradient[n_covariance : n_covariance + n_groups]
+    )
     whitening.backward(
         u, periods, guess_inverse, w, root, scales, by_log_d, by_log_w, square, gradient[:n_covariance]
     )
+    return value
+
+
+@kernel
+def sampled(
+    rest: Array,
+    coefficient_root: Array,
+    w: Array,
+    scale: Array,
+    members: Array,
+    groups: Array,
+    centre: Array,
+    xx: Array,
+    xe: Array,
+    ee: Array,
+    equation: Array,
+    by_log_scale: Array,
+    square: Array,
+    gradient: Array,
+) -> float:
+    """Return likelihood (without ``T log det W``) and prior of sampled coefficients; write their gradient.
+
+    Parameters
+    ----------
+    rest, gradient : arrays of float, shape (n_groups + K,)
+        Standardised pooled means, then coefficients whitened by ``coefficient_root``.
+    """
+    n_groups, k = groups.shape[0], scale.shape[0]
+    m, z = rest[:n_groups], rest[n_groups:]
+    shift, by_shift = np.zeros(k), np.empty(k)
+    for a in range(k):
+        for b in range(a + 1):
+            shift[a] += coefficient_root[a, b] * z[b]
+    value: float = error_block.known(w, shift, xx, xe, ee, equation, by_shift, square)
+    value += coefficient_block.log_density(
+        shift, m, centre, scale, members, groups, by_shift, gradient[:n_groups], by_log_scale
+    )
+    for b in range(k):
+        gradient[n_groups + b] = 0.0
+    for a in range(k):
+        for b in range(a + 1):
+            gradient[n_groups + b] += coefficient_root[a, b] * by_shift[a]
     return value
 
 
@@ -169,3 +256,20 @@ def covariance_roots(u: Array, packed: Packed) -> Array:
     a[:, np.arange(n), np.arange(n)] = np.exp(u[:, :n])
     a[:, *np.tril_indices(n, -1)] = u[:, n : whitening.n_free(n)] / np.sqrt(packed.data[4])
     return np.asarray(packed.start.root @ np.linalg.solve(a, np.broadcast_to(np.eye(n), a.shape)))
+
+
+def sampled_coefficients(u: Array, packed: Packed, law: CoefficientLaw) -> tuple[Array, Array]:
+    """Return stated coefficients and pooled means at draws of a density that samples them.
+
+    Parameters
+    ----------
+    u : array of float, shape (n_draws, n_dim)
+
+    Returns
+    -------
+    tuple of arrays of float, shapes (n_draws, K) and (n_draws, n_groups)
+    """
+    n_groups, k = len(law.groups), len(law.mean)
+    z, m = u[:, -k:], u[:, u.shape[1] - k - n_groups : u.shape[1] - k]
+    mean = np.array([g.mean for g in law.groups]) + np.array([g.mean_scale for g in law.groups]) * m
+    return packed.start.stated + z @ packed.start.coefficient_root.T, mean

@@ -30,10 +30,13 @@ class Start:
         Stated coefficients.
     root : array of float, shape (n_equations, n_equations)
         Lower Cholesky factor of the error covariance.
+    coefficient_root : array of float, shape (K, K)
+        Lower Cholesky factor of the coefficients' covariance given that error covariance.
     """
 
     stated: Array
     root: Array
+    coefficient_root: Array
 
 
 def first_guess(factor: Factor, prior: Prior, *, n_steps: int = N_STEPS) -> Start:
@@ -53,7 +56,7 @@ def first_guess(factor: Factor, prior: Prior, *, n_steps: int = N_STEPS) -> Star
     cross, periods, weight = design.T @ design, factor.n_periods, 2.0 * prior.correlation.concentration
     centre = law.stated_mean
     covariance = np.diag(_starting_variances(responses - (design * centre) @ membership, prior, periods))
-    stated = centre
+    stated, conditional = centre, columns @ columns.T
     for _ in range(n_steps):
         omega = np.linalg.inv(covariance)
         information = omega[np.ix_(equation, equation)] * cross
@@ -66,7 +69,8 @@ def first_guess(factor: Factor, prior: Prior, *, n_steps: int = N_STEPS) -> Star
         diagonal = np.diag(np.diag(square))
         covariance = (square + weight * diagonal / periods) / (periods + weight)
         covariance = 0.5 * (covariance + covariance.T)
-    return Start(stated, np.linalg.cholesky(covariance))
+    conditional = 0.5 * (conditional + conditional.T)
+    return Start(stated, np.linalg.cholesky(covariance), np.linalg.cholesky(conditional))
 
 
 def _starting_variances(residuals: Array, prior: Prior, periods: int) -> Array:

@@ -8,8 +8,8 @@ from numpy.typing import NDArray
 from bayes_sys.model.blocks import coefficients as coefficient_block
 from bayes_sys.model.blocks import whitening
 from bayes_sys.model.compiled import entry_points, is_compiled
-from bayes_sys.model.conditional import conditional_coefficients
-from bayes_sys.model.density import Packed, covariance_roots, pack
+from bayes_sys.model.conditional import Conditional, conditional_coefficients
+from bayes_sys.model.density import Packed, covariance_roots, pack, sampled_coefficients
 from bayes_sys.prior.law import Prior
 from bayes_sys.sampling.draws import Draws
 from bayes_sys.sampling.nuts import sample_callback
@@ -22,10 +22,15 @@ Array = NDArray[np.float64]
 COEFFICIENT_STREAM = 1  # which stream of the seed the coefficients are drawn from
 
 
-def sample_direct(system: System, prior: Prior, settings: Settings, watch: Watcher) -> Draws:
-    """Sample a Gaussian system with complete data."""
+def sample_direct(
+    system: System, prior: Prior, settings: Settings, watch: Watcher, *, integrated: bool | None = None
+) -> Draws:
+    """Sample a Gaussian system with complete data.
+
+    ``integrated`` forces the coefficients to be integrated out or sampled; chosen by size if left out.
+    """
     watch(Progress("preparing"))
-    packed = pack(system.factor, prior)
+    packed = pack(system.factor, prior, integrated=integrated)
     if not is_compiled():
         watch(Progress("compiling"))
     callbacks = entry_points()
@@ -64,7 +69,9 @@ def _read(
     flat = points.reshape(n_chains * n_draws, -1)
     roots = covariance_roots(flat, packed)
     n_covariance = whitening.n_free(system.n_equations)
-    spreads = coefficient_block.spreads(prior.coefficients, flat[:, n_covariance:])
+    n_groups = len(prior.coefficients.groups)
+    scores = flat[:, n_covariance : n_covariance + n_groups]
+    spreads = coefficient_block.spreads(prior.coefficients, scores)
     parts = []
     for chain in range(n_chains):  # a stream per chain: more chains leave the earlier ones as they were
         rows = slice(chain * n_draws, (chain + 1) * n_draws)
@@ -74,13 +81,16 @@ def _read(
                 system.factor, prior, packed.start.stated, roots[rows], spreads[rows], rng
             )
         )
-    conditional = type(parts[0]).joined(parts)
+    conditional = Conditional.joined(parts)
+    stated, pooled_mean = conditional.stated, conditional.pooled_mean
+    if not packed.integrated:
+        stated, pooled_mean = sampled_coefficients(flat, packed, prior.coefficients)
     return Draws(
         n_chains=n_chains,
-        coefficients=conditional.draw,
-        stated=conditional.stated,
+        coefficients=stated @ prior.coefficients.to_raw.T,
+        stated=stated,
         roots=roots,
-        pooled_mean=conditional.pooled_mean,
+        pooled_mean=pooled_mean,
         pooled_spread=spreads,
         conditional=conditional,
         statistics=statistics,

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from bayes_sys.model.blocks import coefficients as coefficient_block
 from bayes_sys.model.blocks import correlation as correlation_block
 from bayes_sys.model.compiled import value_and_gradient
-from bayes_sys.model.density import covariance_roots, pack
+from bayes_sys.model.density import covariance_roots, pack, sampled_coefficients
 from bayes_sys.model.factory import assemble
 from bayes_sys.prior.law import Prior
 from bayes_sys.system.system import System
@@ -48,7 +48,8 @@ class Identity:
     def __post_init__(self) -> None:
         from pytensor.compile.mode import Mode
 
-        self.packed = pack(self.system.factor, self.prior)
+        self.packed = pack(self.system.factor, self.prior, integrated=True)
+        self.sampled = pack(self.system.factor, self.prior, integrated=False)
         self.model = assemble(self.system, self.prior)
         mode = Mode(linker="py", optimizer=None)
         self.variables = self.model.value_vars
@@ -73,7 +74,8 @@ class Identity:
         root = covariance_roots(u[None, :], self.packed)[0]
         scales = np.sqrt((root**2).sum(axis=1))
         n = len(scales)
-        spreads = coefficient_block.spreads(self.prior.coefficients, u[n * (n + 1) // 2 :])
+        scores = u[n * (n + 1) // 2 : self.packed.n_dim]
+        spreads = coefficient_block.spreads(self.prior.coefficients, scores)
         return scales, root / scales[:, None], spreads
 
     def log_volume(self, u: Array) -> float:
@@ -164,6 +166,23 @@ class Identity:
     def reference(self, u: Array, theta: Array) -> float:
         """The right-hand side of the identity."""
         return self.pymc_value(u, theta) - self.conditional(u, theta) + self.log_volume(u)
+
+    def compiled_sampled(self, u: Array) -> tuple[float, Array]:
+        """Value and gradient of the compiled density that samples the coefficients, in all its coordinates."""
+        return value_and_gradient(u, self.sampled.data)
+
+    def reference_sampled(self, u: Array) -> float:
+        """What PyMC says in those coordinates, up to a constant."""
+        law = self.prior.coefficients
+        stated, mean = sampled_coefficients(u[None, :], self.sampled, law)
+        spreads = self.quantities(u)[2]
+        scale, centre = law.scale.copy(), law.mean.copy()
+        scale[law.pooled] = spreads[law.group[law.pooled]]
+        centre[law.pooled] = mean[0][law.group[law.pooled]]
+        standard = [(mean[0][i] - g.mean) / g.mean_scale for i, g in enumerate(law.groups)]
+        theta = np.concatenate([(stated[0] - centre) / scale, standard])
+        inner = u[: self.packed.n_dim]
+        return self.pymc_value(inner, theta) + self.log_volume(inner) - float(np.log(scale).sum())
 
     def reference_gradient(self, u: Array, theta: Array) -> Array:
         """Its derivative in u."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from helpers import make_system
-from pymc_identity import Identity
+from pymc_identity import Identity, derivative
 
 from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
 from bayes_sys.system.system import System
@@ -91,6 +91,22 @@ def check_gradients(identity: Identity, count: int) -> None:
         assert np.abs(ours - theirs).max() <= 1e-8 * np.abs(theirs).max()
 
 
+def check_sampled(identity: Identity, count: int) -> None:
+    rng = np.random.default_rng(6)
+    points = 0.6 * rng.normal(size=(count, identity.sampled.n_dim))
+    ours = np.array([identity.compiled_sampled(u)[0] for u in points])
+    theirs = np.array([identity.reference_sampled(u) for u in points])
+    gap = ours - theirs
+    assert np.abs(gap - gap[0]).max() <= 1e-8 * np.abs(theirs).max()
+    for u in points[: max(2, count // 10)]:
+        numerical = derivative(lambda v: np.asarray(identity.compiled_sampled(v)[0]), u)
+        assert np.abs(identity.compiled_sampled(u)[1] - numerical).max() <= 1e-8 * np.abs(numerical).max()
+
+
+def test_log_density_with_sampled_coefficients_equals_the_pymc_model_too(identity: Identity) -> None:
+    check_sampled(identity, 8)
+
+
 def test_log_density_equals_the_pymc_model_up_to_a_constant(identity: Identity) -> None:
     check_values(identity, 8)
 
@@ -103,3 +119,4 @@ def test_gradient_equals_the_pymc_model(identity: Identity) -> None:
 def test_log_density_and_gradient_equal_the_pymc_model_at_a_hundred_points(identity: Identity) -> None:
     check_values(identity, 100)
     check_gradients(identity, 100)
+    check_sampled(identity, 100)

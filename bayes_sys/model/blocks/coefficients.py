@@ -22,9 +22,13 @@ VARIABLE, STATED, POOLED_MEAN, POOLED_SPREAD = "coefficients", "stated", "pooled
 HALF_LOG_TWO_PI = 0.5 * float(np.log(2.0 * np.pi))
 
 
-def n_free(law: CoefficientLaw) -> int:
-    """Return how many unconstrained numbers the law adds once the coefficients are integrated out."""
-    return len(law.groups)
+def n_free(law: CoefficientLaw, *, integrated: bool) -> int:
+    """Return how many unconstrained numbers the law adds.
+
+    The spreads' normal scores; and where the coefficients are sampled, the standardised pooled means and one
+    number a coefficient.
+    """
+    return len(law.groups) if integrated else 2 * len(law.groups) + len(law.mean)
 
 
 def pack(law: CoefficientLaw) -> tuple[Array, Array]:
@@ -78,6 +82,51 @@ def backward(v: Array, members: Array, by_log_scale: Array, by_score: Array, gra
         g = int(members[k, 1])
         if g >= 0:
             gradient[g] += by_log_scale[k] * by_score[g]
+
+
+@kernel
+def log_density(
+    shift: Array,
+    m: Array,
+    centre: Array,
+    scale: Array,
+    members: Array,
+    groups: Array,
+    by_shift: Array,
+    by_mean: Array,
+    by_log_scale: Array,
+) -> float:
+    """Return the log prior of sampled coefficients and pooled means, up to a constant; add up derivatives.
+
+    Parameters
+    ----------
+    shift : array of float, shape (K,)
+        Coefficients less the reference.
+    m : array of float, shape (n_groups,)
+        Standardised pooled means.
+    centre : array of float, shape (K,)
+        Prior centre less the reference, pooled means at their own centre.
+    scale : array of float, shape (K,)
+    by_shift : array of float, shape (K,), added to
+    by_mean : array of float, shape (n_groups,), written
+    by_log_scale : array of float, shape (K,), written
+    """
+    total = 0.0
+    for g in range(m.shape[0]):
+        total -= 0.5 * m[g] * m[g]
+        by_mean[g] = -m[g]
+    for k in range(shift.shape[0]):
+        g = int(members[k, 1])
+        off = shift[k] - centre[k]
+        if g >= 0:
+            off -= groups[g, 0] * m[g]
+        z = off / scale[k]
+        total -= 0.5 * z * z + np.log(scale[k])
+        by_shift[k] -= z / scale[k]
+        by_log_scale[k] = z * z - 1.0
+        if g >= 0:
+            by_mean[g] += groups[g, 0] * z / scale[k]
+    return total
 
 
 def spreads(law: CoefficientLaw, scores: Array) -> Array:

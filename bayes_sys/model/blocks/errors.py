@@ -1,4 +1,4 @@
-"""Block: Gaussian errors, correlated across equations, with the coefficients integrated out.
+"""Block: Gaussian errors, correlated across equations; the coefficients known, or integrated out.
 
 Given the error covariance and the prior's scales the coefficients are Gaussian, so they leave the density
 exactly: with ``b = centre + B theta``, ``theta ~ N(0, I)``, ``F_ab = Omega_e(a)e(b) x_a' x_b`` and
@@ -75,6 +75,43 @@ def residual_square(shift: Array, xx: Array, xe: Array, ee: Array, equation: Arr
             out[i, j] -= shift[a] * xe[a, j]
         for b in range(k):
             out[i, int(equation[b])] += shift[a] * xx[a, b] * shift[b]
+
+
+@kernel
+def known(
+    w: Array, shift: Array, xx: Array, xe: Array, ee: Array, equation: Array, by_shift: Array, square: Array
+) -> float:
+    """Return the log likelihood of (Sigma, b) without its ``T log det W``, at known coefficients.
+
+    Parameters
+    ----------
+    w : array of float, shape (n, n)
+    shift : array of float, shape (K,)
+        Coefficients less the reference.
+    xx, xe, ee, equation
+        As for ``collapsed``.
+    by_shift : array of float, shape (K,), written
+        Derivative in the coefficients.
+    square : array of float, shape (n, n), written
+        The residual cross-product, which carries the derivative in Sigma^-1.
+    """
+    n, k = ee.shape[0], xx.shape[0]
+    moved = np.empty((k, n))  # x_a' e_j at these coefficients
+    for a in range(k):
+        for j in range(n):
+            moved[a, j] = xe[a, j]
+        for b in range(k):
+            moved[a, int(equation[b])] -= xx[a, b] * shift[b]
+    for i in range(n):
+        for j in range(n):
+            square[i, j] = ee[i, j]
+    for a in range(k):
+        i = int(equation[a])
+        for j in range(n):
+            square[j, i] -= xe[a, j] * shift[a]
+            square[i, j] -= shift[a] * moved[a, j]
+    score(w, moved, equation, by_shift)
+    return -0.5 * trace_whitened(w, square)
 
 
 @kernel
