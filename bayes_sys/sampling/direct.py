@@ -27,7 +27,7 @@ def sample_direct(
 ) -> Draws:
     """Sample a Gaussian system with complete data.
 
-    ``integrated`` forces the coefficients to be integrated out or sampled; chosen by size if left out.
+    ``integrated`` forces the coefficients to be integrated out or sampled; ``integrates`` chooses if left out.
     """
     watch(Progress("preparing"))
     packed = pack(system.factor, prior, integrated=integrated)
