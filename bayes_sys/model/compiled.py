@@ -109,19 +109,21 @@ def source_hash() -> str:
 
 
 def cache_folder() -> Path:
-    """Where compiled densities are kept: BAYES_SYS_CACHE, else the user's cache folder, else a private one."""
+    """Where compiled densities are kept: BAYES_SYS_CACHE, else the user's cache folder.
+
+    A fresh private folder among the temporary files where that cannot be written: slower, never wrong.
+    """
     named = os.environ.get("BAYES_SYS_CACHE")
-    if named:
-        return Path(named)
     base = os.environ.get("XDG_CACHE_HOME") or (
         os.environ.get("LOCALAPPDATA") if sys.platform == "win32" else None
     )
-    folder = (Path(base) if base else Path.home() / ".cache") / "bayes-sys"
+    folder = Path(named) if named else (Path(base) if base else Path.home() / ".cache") / "bayes-sys"
     try:
         folder.mkdir(parents=True, exist_ok=True)
+        with tempfile.TemporaryFile(dir=folder):
+            return folder
     except OSError:
         return _private_folder()
-    return folder if os.access(folder, os.W_OK) else _private_folder()
 
 
 @cache

@@ -6,13 +6,15 @@ from collections.abc import Callable
 from dataclasses import replace
 from typing import TYPE_CHECKING, Literal
 
-from bayes_sys.errors import InputError, nearest
+import numpy as np
+
+from bayes_sys.errors import InputError, SamplingError, nearest
 from bayes_sys.prior.cards import PriorCard
 from bayes_sys.prior.law import Prior
 from bayes_sys.prior.resolve import resolve
 from bayes_sys.sampling.draws import Draws
 from bayes_sys.sampling.progress import Watcher, unwatched
-from bayes_sys.sampling.settings import CAREFUL, ORDINARY, Settings
+from bayes_sys.sampling.settings import ALONE, CAREFUL, POOLED, Settings
 from bayes_sys.system.system import System
 
 if TYPE_CHECKING:
@@ -77,9 +79,16 @@ def sample(
     prior = resolve(card, system)
     settings = Settings(chains, warmup, draws, seed, target_accept, cores)
     if settings.target_accept is None:
-        settings = replace(settings, target_accept=ORDINARY if prior.coefficients.groups else CAREFUL)
+        settings = replace(settings, target_accept=_target(system, prior))
     name = choose_engine(engine)
-    result = _engine(name)(system, prior, settings, progress or unwatched)
+    try:
+        result = _engine(name)(system, prior, settings, progress or unwatched)
+    except np.linalg.LinAlgError as fault:
+        raise SamplingError(
+            "The error covariance became singular in floating point: the data and the prior leave some weighted "
+            "sum of the responses without error. Use a card that keeps the error scales from zero or the "
+            "correlations from one (a higher concentration), or look for a response that others determine."
+        ) from fault
     attributes = {
         "engine": name,
         "seed": seed,
@@ -89,6 +98,12 @@ def sample(
         "target_accept": settings.target_accept,
     }
     return posterior_tree(system, prior, result, attributes, log_likelihood=log_likelihood)
+
+
+def _target(system: System, prior: Prior) -> float:
+    if system.n_equations == 1:
+        return ALONE
+    return POOLED if prior.coefficients.groups else CAREFUL
 
 
 def choose_engine(engine: str) -> str:

@@ -28,6 +28,7 @@ Finding = tuple[str, str]  # what failed, what to do about it
 
 LEAST_BFMI = 0.3
 REPORTED = ("coefficients", "scales", "correlations", "pooled_mean", "pooled_spread")
+LONGER = "Let the chains run longer: more --draws, and more --warmup where R-hat is the trouble."
 SECOND_WARMUP, SECOND_DRAWS, SECOND_TARGET = 2, 2, 0.99
 
 
@@ -132,15 +133,15 @@ def _mixing(figures: Figures, limits: Limits) -> Iterator[Finding]:
         yield (
             f"The chains have not mixed: R-hat is {figures.rhat_max:.3f} for {figures.rhat_worst}, "
             f"at most {limits.rhat:g} is allowed.",
-            "Let the chains run longer (--warmup, --draws).",
+            LONGER,
         )
 
 
 def _effective_draws(part: str, least: float, worst: str, limits: Limits) -> Iterator[Finding]:
     if not least >= limits.ess:
         yield (
-            f"Too few effective draws: {least:.0f} ({part}) for {worst}, at least {limits.ess:g} are wanted.",
-            "Take more draws (--draws).",
+            f"Too few effective draws: {least:,.0f} ({part}) for {worst}, at least {limits.ess:,.0f} are wanted.",
+            LONGER,
         )
 
 
@@ -159,7 +160,7 @@ def _energy(figures: Figures) -> Iterator[Finding]:
         yield (
             f"The energy diagnostic is {figures.bfmi_min:.2f}, at least {LEAST_BFMI} is wanted: heavy tails "
             "are explored slowly.",
-            "Use a prior with lighter tails, or let the chains run longer (--warmup, --draws).",
+            "Use a prior with lighter tails: half-normal error scales rather than half-Student-t.",
         )
 
 

@@ -81,11 +81,12 @@ def test_every_module_the_density_calls_is_hashed():
     assert used <= hashed
 
 
-def test_a_folder_that_cannot_be_written_is_replaced_by_a_private_one(monkeypatch, tmp_path):
+@pytest.mark.parametrize("variable", ["XDG_CACHE_HOME", "BAYES_SYS_CACHE"])
+def test_a_folder_that_cannot_be_written_is_replaced_by_a_private_one(monkeypatch, tmp_path, variable):
     blocked = tmp_path / "file"
     blocked.write_text("")
     monkeypatch.delenv("BAYES_SYS_CACHE", raising=False)
-    monkeypatch.setenv("XDG_CACHE_HOME", str(blocked))
+    monkeypatch.setenv(variable, str(blocked))
     folder = compiled.cache_folder()
     assert folder.is_dir()
     assert os.access(folder, os.W_OK)

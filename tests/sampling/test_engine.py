@@ -8,10 +8,11 @@ from arviz_stats import loo
 from helpers import make_system
 from scipy import stats
 
-from bayes_sys.errors import InputError
+from bayes_sys.errors import InputError, SamplingError
 from bayes_sys.prior.cards import build_card, read_card
-from bayes_sys.sampling import nuts
+from bayes_sys.sampling import engine, nuts
 from bayes_sys.sampling.engine import sample
+from bayes_sys.sampling.gate import Limits, hold
 from bayes_sys.sampling.progress import Progress
 
 SHORT = {"warmup": 200, "draws": 150}
@@ -162,3 +163,19 @@ def test_one_equation_has_no_correlations(card):
 def test_impossible_settings_are_refused_by_name(system, card, settings, word):
     with pytest.raises(InputError, match=word):
         sample(system, card, **settings)
+
+
+def test_a_covariance_that_becomes_singular_is_said_in_words(system, card, monkeypatch):
+    def singular(*_):
+        raise np.linalg.LinAlgError("Matrix is not positive definite")
+
+    monkeypatch.setattr(engine, "_engine", lambda name: singular)
+    with pytest.raises(SamplingError, match="became singular"):
+        sample(system, card)
+
+
+def test_one_equation_alone_passes_the_gate_with_room():
+    rng = np.random.default_rng(0)
+    x = np.column_stack([np.ones(20), rng.normal(size=20)])
+    tree = sample(make_system([x], rng.normal(size=(20, 1))), read_card("weakly-informative"))
+    assert hold(tree, Limits(ess=1200)).passed
