@@ -16,7 +16,7 @@ import sys
 import threading
 import warnings
 from collections.abc import Mapping, Sequence
-from contextlib import redirect_stdout
+from contextlib import nullcontext, redirect_stdout, suppress
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, NoReturn, TextIO
@@ -53,6 +53,12 @@ def examine(given: argparse.Namespace, watch: Watcher) -> Answer:
     watch(Progress("reading"))
     from bayes_sys import display, job
 
+    if given.overwrite and given.out is None:
+        raise InputError(
+            "--overwrite says what may be replaced, but without --out nothing is written.",
+            where=f"{PROGRAM} examine",
+            mend="Name the folder with --out, or leave --overwrite out.",
+        )
     found = job.examine(given.study, out=given.out, overwrite=given.overwrite, progress=watch)
     more = {"checks": found.rows, "benchmark": found.benchmark.to_dict("records")}
     said = [*found.prepared.system.notes, *found.prepared.warnings]
@@ -111,6 +117,10 @@ def _of_run(manifest: Mapping[str, Any], out: Path, text: str = "") -> Answer:
     return Answer(manifest["status"], out, gate, said, text, exit_code=code)
 
 
+class HelpAsked(Exception):
+    """Help was asked for, and this is its text; argparse itself would keep silent where it cannot be printed."""
+
+
 class Parser(argparse.ArgumentParser):
     """A parser whose complaints are errors of ours, and which knows the nearest option."""
 
@@ -118,15 +128,23 @@ class Parser(argparse.ArgumentParser):
         """Raise what is wrong with the command line."""
         raise InputError(f"{message}.", where=self.prog, mend=f"“{self.prog} --help” shows what there is.")
 
+    def print_help(self, file: object = None) -> NoReturn:
+        """Hand the help over instead of printing it."""
+        raise HelpAsked(self.format_help().strip())
+
     def refuse(self, unknown: Sequence[str]) -> NoReturn:
         """Raise for arguments that this command does not know."""
-        options = [name for name in self._option_string_actions if name.startswith("--")]
-        hint = (
-            nearest(unknown[0], options)
-            if unknown[0].startswith("-")
-            else f"“{self.prog} --help” shows more."
+        if unknown[0].startswith("-"):
+            options = [name for name in self._option_string_actions if name.startswith("--")]
+            mend = nearest(unknown[0], options)
+            raise InputError(f"there is no option “{unknown[0]}”.", where=self.prog, mend=mend)
+        takes = [str(action.metavar) for action in self._actions if not action.option_strings]
+        room = f"one {takes[0]} at a time" if takes else "options only"
+        raise InputError(
+            f"this takes {room}; “{unknown[0]}” is one too many.",
+            where=self.prog,
+            mend=f"“{self.prog} --help” shows more.",
         )
-        raise InputError(f"there is no “{unknown[0]}”.", where=self.prog, mend=hint)
 
     def _check_value(self, action: argparse.Action, value: Any) -> None:
         """Refuse a value that is not among the choices, naming the nearest."""
@@ -227,8 +245,8 @@ def parse(arguments: Sequence[str]) -> argparse.Namespace:
     ------
     InputError
         If it is wrong.
-    SystemExit
-        If help was asked for, which is then printed.
+    HelpAsked
+        If help was asked for.
     """
     parser, parsers = build_parser()
     given, unknown = parser.parse_known_args(list(arguments) or ["--help"])
@@ -243,7 +261,9 @@ def main() -> None:
     prepare_process()
     code = execute(sys.argv[1:])
     for stream in (sys.stdout, sys.stderr):
-        stream.flush()
+        # Lines of ours are flushed as they are written: what fails here was told, or nobody can be told.
+        with suppress(OSError):
+            stream.flush()
     # At once, because an interrupt that a library has seen on its way would still decide the exit code, and
     # because threads of the sampler need not be waited for. Everything written is closed by now.
     os._exit(code)
@@ -290,26 +310,32 @@ def execute(arguments: Sequence[str]) -> int:
         Without the program's name.
     """
     # Looked for here as well as by the parser, because a line that does not parse must answer in kind.
-    as_json, quiet = "--json" in arguments, "--quiet" in arguments
-    stray = io.StringIO()
-    if as_json:
-        # Nothing but the object may reach standard output, whoever prints.
-        with redirect_stdout(stray):
-            answer = _answer(arguments)
-    else:
+    as_json, asks_help = "--json" in arguments, not {"-h", "--help"}.isdisjoint(arguments)
+    quiet = "--quiet" in arguments and not asks_help
+    # In JSON mode nothing but the object may reach standard output, whoever prints.
+    with redirect_stdout(io.StringIO()) if as_json else nullcontext():
         answer = _answer(arguments)
-    if answer is None:
-        answer = Answer("complete", messages=[stray.getvalue().strip()])
     try:
         _print_json(answer) if as_json else _print_text(answer, quiet=quiet)
+        sys.stdout.flush()
     except BrokenPipeError:
-        # The reader has seen enough; nor must Python complain when it flushes at the end.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _drop_output()  # the reader has seen enough
+    except OSError as error:
+        _drop_output()
+        done = f" What was made is in {answer.out}." if answer.out is not None else ""
+        with suppress(OSError):
+            _line(f"Error: standard output cannot be written ({error.strerror}).{done}", sys.stderr)
+        return FAULT
     return answer.exit_code
 
 
-def _answer(arguments: Sequence[str]) -> Answer | None:
-    """Parse and work; every failure becomes an answer. None: help was asked for and has been printed."""
+def _drop_output() -> None:
+    """Let standard output lead nowhere, so that Python does not complain when it flushes at the end."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _answer(arguments: Sequence[str]) -> Answer:
+    """Parse and work; every failure becomes an answer."""
     try:
         given = parse(arguments)
         from bayes_sys import display
@@ -317,8 +343,8 @@ def _answer(arguments: Sequence[str]) -> Answer | None:
         with display.watching(quiet=given.quiet) as watch:
             answer: Answer = given.work(given, watch)
             return answer
-    except SystemExit:
-        return None
+    except HelpAsked as asked:
+        return Answer("complete", messages=[str(asked)], text=str(asked))
     except BayesSysError as error:
         status = "input-error" if isinstance(error, InputError) else "error"
         return Answer(status, messages=[str(error)], exit_code=error.exit_code)
@@ -359,6 +385,10 @@ def _print_text(answer: Answer, *, quiet: bool) -> None:
         return
     if answer.text and not quiet:
         _line(answer.text, sys.stdout)
+    elif answer.exit_code == GATE_FAILED and answer.gate is not None:
+        from bayes_sys.display import gate_line
+
+        _line(gate_line(answer.gate), sys.stderr)
     if answer.out is not None:
         _line(str(answer.out), sys.stdout)
 

@@ -67,8 +67,10 @@ def trouble(path: Path, error: OSError, verb: str) -> RunFolderError:
         name = error.filename or str(path)
         what = f"a file stands where a folder is needed (“{name}”)."
         mend = "Move the file, or name another place with --out."
-    elif code == errno.ENOENT:
+    elif code == errno.ENOENT and verb == "read":
         what, mend = "there is no such file.", "Run the study again."
+    elif code == errno.ENOENT:
+        what, mend = "nothing can be made here.", "Name another place with --out."
     else:
         what, mend = f"this cannot be used ({error}).", "Name another place with --out."
     return RunFolderError(what, where=str(path), mend=mend)

@@ -10,7 +10,7 @@ from contextlib import contextmanager
 from typing import TYPE_CHECKING, Any
 
 from bayes_sys import runs
-from bayes_sys.classical.check import FINE, NOTE, WARNING
+from bayes_sys.classical.check import FINE, LABELS, NOTE, WARNING, counted, for_people
 from bayes_sys.sampling.progress import Progress, Watcher, unwatched
 
 if TYPE_CHECKING:
@@ -120,15 +120,24 @@ def run_text(run: Run) -> str:
         "",
         *gate_lines(manifest["gate"]),
         "",
-        *coefficient_lines(run.tables[runs.COEFFICIENTS]),
-        "",
-        *correlation_lines(run.tables[runs.CORRELATIONS]),
+        *(result_lines(run.tables) if run.passed else []),
         *(["What to mind", *points(said), ""] if said else []),
-        *wrapped(CAUTION),
-        "",
+        *([*wrapped(CAUTION), ""] if run.passed else [f"Marked as not to be used: {run.folder.path}"]),
         f"Page: {run.folder.path / runs.REPORT}",
     ]
     return "\n".join(lines)
+
+
+def result_lines(tables: Mapping[str, pd.DataFrame]) -> list[str]:
+    """Return what a posterior that passed the gate says: coefficients, and correlations of the errors."""
+    coefficients = coefficient_lines(tables[runs.COEFFICIENTS])
+    return [*coefficients, "", *correlation_lines(tables[runs.CORRELATIONS])]
+
+
+def gate_line(gate: Mapping[str, Any]) -> str:
+    """Return in one line that the gate was not passed and why, for whoever sees nothing else."""
+    why = " ".join(gate["failures"])
+    return f"The posterior did not pass the gate; what was written is marked as not to be used. {why}".strip()
 
 
 def gate_lines(gate: Mapping[str, Any]) -> list[str]:
@@ -141,7 +150,7 @@ def gate_lines(gate: Mapping[str, Any]) -> list[str]:
         return [f"The posterior passed the gate. {figures}"]
     return [
         f"The posterior did NOT pass the gate. {figures}",
-        "Everything is written, and marked; do not read these figures as results.",
+        "Everything is written, and marked; no figure of it is a result, so none is shown here.",
         *points([*gate["failures"], *gate["advice"]]),
     ]
 
@@ -174,7 +183,7 @@ def correlation_lines(table: pd.DataFrame) -> list[str]:
 
 def examination_text(examination: Examination) -> str:
     """Return the checks and the classical estimates as text."""
-    system, rows = examination.prepared.system, examination.rows
+    system, rows = examination.prepared.system, for_people(examination.rows)
     lines = [
         system.title,
         _size(system),
@@ -183,7 +192,7 @@ def examination_text(examination: Examination) -> str:
         "The system as a whole",
         *points(_marked(row) for row in rows if not row["equation"]),
         "",
-        "Each equation (! may mislead if not mended, * to be known when reading the results)",
+        *wrapped("Each equation (! may mislead if not mended, * to be known when reading the results)"),
         *equation_matrix(rows, system.names),
         *points(shared_sentences(row for row in rows if row["equation"] and row["verdict"] != FINE)),
         "",
@@ -208,7 +217,8 @@ def equation_matrix(rows: Sequence[Mapping[str, Any]], names: Sequence[str]) -> 
         some = names[start : start + MOST_COLUMNS]
         cells = [["", *(f"{name} " for name in some)]]
         cells += [
-            [check.replace("_", " "), *(line.get(n, "") for n in some)] for check, line in found.items()
+            [LABELS.get(check, check.replace("_", " ")), *(line.get(n, "") for n in some)]
+            for check, line in found.items()
         ]
         lines += aligned(cells, left=1)
     return lines
@@ -249,10 +259,12 @@ def _marked(row: Mapping[str, Any]) -> str:
 
 
 def _size(system: System) -> str:
-    counts = (
-        f"{system.n_equations} equations, {system.n_periods} periods, {system.n_coefficients} coefficients"
-    )
-    labels = system.periods.labels
+    sizes = {
+        "equation": system.n_equations,
+        "period": system.n_periods,
+        "coefficient": system.n_coefficients,
+    }
+    counts, labels = ", ".join(counted(size, noun) for noun, size in sizes.items()), system.periods.labels
     return f"{counts}; {labels[0]} to {labels[-1]}." if labels else f"{counts}."
 
 

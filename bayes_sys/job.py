@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any
 from pydantic import ValidationError
 
 from bayes_sys import runs
-from bayes_sys.classical.check import WARNING
+from bayes_sys.classical.check import WARNING, addressed
 from bayes_sys.classical.estimators import Benchmark, benchmark_table, classical_estimates
 from bayes_sys.classical.examination import Check, examination_rows
 from bayes_sys.classical.examination import examine as check_design
@@ -25,7 +25,7 @@ from bayes_sys.prior.cards import PriorCard, read_card, study_card
 from bayes_sys.prior.effective import card_text, effective_card
 from bayes_sys.prior.resolve import resolve
 from bayes_sys.prior.words import describe
-from bayes_sys.record import Clock, closing, opening
+from bayes_sys.record import Clock, closing, not_to_be_used, opening
 from bayes_sys.runs import RunFolder
 from bayes_sys.sampling.progress import Progress, Watcher, unwatched
 from bayes_sys.shipped import card_names, priors_folder
@@ -67,8 +67,8 @@ class Prepared:
 
     @property
     def warnings(self) -> tuple[str, ...]:
-        """Sentences of the checks that a reader should not miss."""
-        return tuple(c.sentence for c in self.checks if c.verdict == WARNING)
+        """Sentences of the checks that a reader should not miss, each with the equations it speaks of."""
+        return tuple(addressed(examination_rows(c for c in self.checks if c.verdict == WARNING)))
 
     @property
     def findings(self) -> dict[str, Any]:
@@ -223,6 +223,7 @@ def run(
         clock.lap("sample")
         progress(Progress("tables"))
         tables = write_results(folder, prepared, outcome)
+        manifest["files"] = folder.files
         clock.lap("tables")
         progress(Progress("page"))
         write_page(folder, {**manifest, "timings": clock.timings})
@@ -363,6 +364,9 @@ def write_results(folder: RunFolder, prepared: Prepared, outcome: Outcome) -> di
     from bayes_sys.posterior.predictive import predictive_band
 
     posterior, system = outcome.posterior, prepared.system
+    if not outcome.verdict.passed:
+        # The mark before the tables: whoever finds those finds it too.
+        folder.write_text(runs.NOT_TO_BE_USED, not_to_be_used(outcome.verdict))
     folder.write_posterior(posterior)
     benchmark, band = prepared.benchmark, predictive_band(posterior, system)
     written = {

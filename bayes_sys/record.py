@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 from bayes_sys import runs
 
 if TYPE_CHECKING:
-    from bayes_sys.sampling.gate import Limits, Outcome
+    from bayes_sys.sampling.gate import Limits, Outcome, Verdict
     from bayes_sys.study.spec import Study
 
 LIBRARIES = ("numpy", "scipy", "pandas", "xarray", "arviz", "pymc", "pytensor", "nutpie", "numba", "h5netcdf")
@@ -94,6 +94,26 @@ def closing(outcome: Outcome, limits: Limits) -> dict[str, Any]:
         "attempts": outcome.attempts,
         "gate": gate,
     }
+
+
+def not_to_be_used(verdict: Verdict) -> str:
+    """Return the text of the file that marks the tables of a posterior which did not pass the gate.
+
+    The tables themselves have fixed columns and could not say it.
+    """
+    lines = [
+        "The tables and draws in this folder are NOT TO BE USED as results.",
+        "",
+        "The posterior did not pass the gate, the conditions that draws must meet before their numbers are shown:",
+        *(f"- {failure}" for failure in verdict.failures),
+        "",
+        "What helps:",
+        *(f"- {advice}" for advice in verdict.advice),
+        "",
+        f"Everything was written so that the cause can be found; {runs.REPORT} shows it. This file goes away when "
+        "the run is redone.",
+    ]
+    return "\n".join(lines) + "\n"
 
 
 def versions() -> Mapping[str, str]:

@@ -33,6 +33,7 @@ BENCHMARK, COEFFICIENTS, SCALES = "benchmark.csv", "coefficients.csv", "scales.c
 CORRELATIONS, FITTED, EQUATIONS = "correlations.csv", "fitted.csv", "equations.csv"
 CHECKS, POOLED = "checks.csv", "pooled.csv"
 POSTERIOR, REPORT = "posterior.nc", "report.html"
+NOT_TO_BE_USED = "NOT-TO-BE-USED.txt"
 
 EXAMINATION_FILES = (EXAMINATION, BENCHMARK)
 RESULT_FILES = (
@@ -49,6 +50,7 @@ RESULT_FILES = (
     POOLED,
     POSTERIOR,
     REPORT,
+    NOT_TO_BE_USED,
     "contrasts.csv",
 )
 RESULT_FOLDERS = ("forecast", "comparison")
@@ -65,6 +67,11 @@ class RunFolder:
     """
 
     path: Path
+
+    @property
+    def files(self) -> list[str]:
+        """Which files of a run stand in the folder, by name."""
+        return sorted(name for name in RESULT_FILES if (self.path / name).is_file())
 
     def write_text(self, name: str, text: str) -> Path:
         """Write UTF-8 text exactly as given, line ends included."""

@@ -17,7 +17,7 @@ from typing import Any
 
 import pytest
 
-from bayes_sys import cli, job
+from bayes_sys import cli, display, job
 from bayes_sys.errors import SamplingError
 from bayes_sys.shipped import case_study
 
@@ -191,6 +191,13 @@ def test_the_effective_card_reproduces_the_run(
     assert means(Path("again")) == pytest.approx(means(finished[0]), rel=1e-6)
 
 
+def test_a_page_is_not_made_of_a_run_that_lacks_a_table(finished: tuple[Path, Said], call: Execute) -> None:
+    shutil.copytree(finished[0], "run")
+    Path("run/pooled.csv").unlink()
+    said = call("report", "run")
+    assert said.code == 2 and "pooled.csv" in said.err and "bayes-sys run" in said.err
+
+
 def test_the_page_is_made_again_and_nothing_else_is_touched(
     finished: tuple[Path, Said], call: Execute
 ) -> None:
@@ -219,13 +226,16 @@ def test_a_failed_gate_is_exit_3_with_everything_written_marked_and_explained(
     said = call("run", study, *FAST)
     place = Path("runs/study")
     assert said.code == 3
-    assert "did NOT pass the gate" in said.out and "do not read these figures as results" in said.out
-    assert "--draws" in said.out
+    assert "did NOT pass the gate" in said.out and "--draws" in said.out
+    assert not any(head in said.out for head in ("FGLS", "Correlation of the errors", "Caution"))
+    assert f"Marked as not to be used: {place}" in said.out
     assert said.last == str(place)
+    mark = (place / "NOT-TO-BE-USED.txt").read_text()
     manifest = json.loads((place / "manifest.json").read_text())
     assert manifest["status"] == "gate-failed"
     assert manifest["attempts"] == 2 and manifest["draws"] > 10
     assert manifest["gate"]["failures"] and manifest["gate"]["advice"]
+    assert all(text in mark for text in (*manifest["gate"]["failures"], *manifest["gate"]["advice"]))
     assert (place / "report.html").exists() and (place / "posterior.nc").exists()
 
     answer = call("run", study, *FAST, "--overwrite", "--json")
@@ -235,7 +245,16 @@ def test_a_failed_gate_is_exit_3_with_everything_written_marked_and_explained(
 
     refused = call("run", study, *FAST)
     assert refused.code == 2 and "--overwrite" in refused.err
-    assert call("report", place).code == 3
+    again = call("report", place)
+    assert again.code == 3 and again.err == display.gate_line(manifest["gate"]) + "\n"
+
+
+def test_a_run_that_is_redone_and_passes_carries_no_mark_of_the_one_that_failed(
+    call: Execute, study: Path
+) -> None:
+    assert call("run", study, *FAST).code == 3
+    assert call("run", study, "--overwrite").code == 0
+    assert not Path("runs/study/NOT-TO-BE-USED.txt").exists()
 
 
 def test_settings_on_the_command_line_win_over_the_study(call: Execute, study: Path) -> None:
@@ -244,9 +263,14 @@ def test_settings_on_the_command_line_win_over_the_study(call: Execute, study: P
     assert (manifest["seed"], manifest["chains"]) == (77, 2)
 
 
-def test_quiet_says_only_the_path(call: Execute, study: Path) -> None:
+def test_quiet_says_only_the_path_and_in_one_line_that_the_gate_was_not_passed(
+    call: Execute, study: Path
+) -> None:
     said = call("run", study, *FAST, "--quiet", "--out", "here")
-    assert (said.out, said.err) == ("here\n", "")
+    assert said.code == 3 and said.out == "here\n"
+    assert said.err.startswith("The posterior did not pass the gate") and said.err.count("\n") == 1
+    found = call("examine", study, "--quiet", "--out", "found")
+    assert (found.out, found.err) == ("found\n", "")
 
 
 def test_the_demo_goes_to_its_own_place_and_is_not_replaced_by_itself(call: Execute) -> None:
@@ -289,6 +313,10 @@ def not_toml(study: Path) -> list[object]:
     return ["run", study]
 
 
+def two_studies(study: Path) -> list[object]:
+    return ["run", study, study]
+
+
 def file_in_the_way(study: Path) -> list[object]:
     return ["run", study, "--out", study]
 
@@ -308,6 +336,9 @@ WRONG: list[tuple[str, Callable[[Path], list[object]], str]] = [
     ("seed of letters", lambda s: ["run", s, "--seed", "x"], "--seed"),
     ("unknown engine", lambda s: ["run", s, "--engine", "steam"], "direct"),
     ("unknown option", lambda s: ["run", s, "--chian", 4], "--chains"),
+    ("two studies", two_studies, "one STUDY at a time"),
+    ("overwrite what is not written", lambda s: ["examine", s, "--overwrite"], "--out"),
+    ("a demo of something", lambda s: ["demo", s], "options only"),
     ("unknown command", lambda s: ["rnu", s], "run"),
     ("no study named", lambda s: ["run"], "STUDY"),
     ("a file in the way", file_in_the_way, "file"),
@@ -453,6 +484,21 @@ def test_an_interrupt_while_sampling_is_one_line_and_leaves_a_marked_folder(
     assert not (place / "run.lock").exists()
 
 
+@pytest.mark.skipif(not Path("/dev/full").exists(), reason="needs a device that is always full")
+@pytest.mark.parametrize("more", [[], ["--json"], ["--help"]])
+def test_output_that_cannot_be_written_is_one_line_and_exit_1(study: Path, more: list[str]) -> None:
+    with Path("/dev/full").open("w") as full:
+        done = subprocess.run(
+            [sys.executable, "-m", "bayes_sys", "examine", str(study), *more],
+            stdout=full,
+            stderr=subprocess.PIPE,
+            text=True,
+            env={**os.environ, "PYTHONPATH": str(ROOT)},
+        )
+    assert done.returncode == 1
+    assert done.stderr.startswith("Error: standard output cannot be written") and done.stderr.count("\n") == 1
+
+
 # Examine, cards, help
 
 
@@ -503,6 +549,7 @@ def test_a_card_of_ones_own_is_explained_by_its_path(call: Execute, finished: tu
 def test_every_command_has_help(call: Execute, command: str) -> None:
     said = call(command, "--help")
     assert said.code == 0 and said.out.startswith("usage: bayes-sys") and said.err == ""
+    assert call(command, "--help", "--quiet").out == said.out
     answer = call(command, "--help", "--json").json
     assert answer["status"] == "complete" and answer["messages"][0].startswith("usage: bayes-sys")
 

@@ -8,11 +8,13 @@ from typing import Any
 import numpy as np
 import pandas as pd
 import pytest
+from helpers import make_system
 from rich.console import Console
 from rich.progress import Progress as Bars
 
 from bayes_sys import display
-from bayes_sys.classical.check import FINE, NOTE, WARNING
+from bayes_sys.classical.check import FINE, LABELS, NOTE, WARNING
+from bayes_sys.classical.equation_checks import equation_checks
 from bayes_sys.sampling.progress import Progress
 
 GATE: dict[str, Any] = {
@@ -46,9 +48,21 @@ def test_a_passed_gate_is_one_line_with_its_figures() -> None:
 def test_a_failed_gate_says_what_failed_what_helps_and_not_to_read_on() -> None:
     failed = {**GATE, "passed": False, "rhat_max": None, "failures": ["It did not mix."], "advice": ["Wait."]}
     text = "\n".join(display.gate_lines(failed))
-    assert "did NOT pass" in text and "do not read" in text
+    assert "did NOT pass" in text and "no figure of it is a result" in text
     assert "- It did not mix." in text and "- Wait." in text
     assert "R-hat -;" in text
+
+
+def test_every_check_of_one_equation_is_labelled_with_what_its_figure_is() -> None:
+    rng = np.random.default_rng(1)
+    design = np.column_stack([np.ones(20), rng.normal(size=(20, 2))])
+    found = {check.name for check in equation_checks(make_system([design], rng.normal(size=(20, 1))), 0)}
+    assert found == LABELS.keys()
+    lines = display.equation_matrix([check("breusch_godfrey", "a", 0.5), check("periods", "a", 4.7)], ["a"])
+    assert [line.strip() for line in lines[1:]] == [
+        "Breusch-Godfrey (p-value)  0.5",
+        "periods per coefficient    4.7",
+    ]
 
 
 def test_an_estimate_that_does_not_exist_is_a_dash() -> None:

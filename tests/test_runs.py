@@ -354,3 +354,12 @@ def test_hashes_are_the_standard_ones(tmp_path: Path) -> None:
     known = "ba7816bf8f01cfea414140de5dae2223b00361a396177a9cb410ff61f20015ad"
     (tmp_path / "f").write_bytes(b"abc")
     assert runs.sha256(b"abc") == runs.sha256(tmp_path / "f") == known
+
+
+@pytest.mark.skipif(not Path("/proc").is_dir(), reason="needs a file system that takes no folders")
+def test_a_place_where_nothing_can_be_made_asks_for_another_place() -> None:
+    with (
+        pytest.raises(RunFolderError, match=r"/proc/nothing: .*Name (another|a) place"),
+        begin_run("/proc/nothing", manifest=MANIFEST),
+    ):
+        pass

@@ -3,11 +3,31 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 FINE, NOTE, WARNING = "fine", "note", "warning"
+
+CROWDED = 3.0
+"""Common practice: fewer free periods per equation than this leave a poorly determined error covariance."""
+
+SIMULATED = "_simulated"
+"""Ends the name of a check that asks what the one without it asks, by simulation."""
+
+LABELS = {
+    "periods": "periods per coefficient",
+    "condition_number": "condition number",
+    "variance_inflation": "variance inflation, largest",
+    "exact_fit": "share of spread left to errors",
+    "durbin_watson": "Durbin-Watson",
+    "breusch_godfrey": "Breusch-Godfrey (p-value)",
+    "heteroskedasticity": "heteroskedasticity (p-value)",
+    "leverage": "leverage, largest",
+    "cooks_distance": "Cook's distance, largest",
+    "outlying_period": "studentised residual, largest",
+}
+"""What the figure of each check of one equation is, for a table of figures."""
 
 
 @dataclass(frozen=True)
@@ -50,6 +70,36 @@ def examination_rows(checks: Iterable[Check]) -> list[dict[str, Any]]:
         }
         for c in checks
     ]
+
+
+def addressed(rows: Iterable[Mapping[str, Any]]) -> list[str]:
+    """Return the sentences of checks, the equations they speak of in front, each said once.
+
+    Parameters
+    ----------
+    rows : iterable of mappings
+        As `examination_rows` lays them out.
+    """
+    said: dict[str, list[str]] = {}
+    for row in rows:
+        names = said.setdefault(row["sentence"], [])
+        names += [row["equation"]] if row["equation"] else []
+    return [f"{', '.join(names)}: {sentence}" if names else sentence for sentence, names in said.items()]
+
+
+def for_people(rows: Iterable[Mapping[str, Any]]) -> list[Mapping[str, Any]]:
+    """Leave out what another check says as well, so that a reader meets each finding once.
+
+    A simulated test that has a figure names the p-value of its approximation too, and is the better of the two.
+
+    Parameters
+    ----------
+    rows : iterable of mappings
+        As `examination_rows` lays them out.
+    """
+    listed = list(rows)
+    simulated = {(r.get("name"), r.get("equation")) for r in listed if r.get("figure") is not None}
+    return [r for r in listed if (f"{r.get('name')}{SIMULATED}", r.get("equation")) not in simulated]
 
 
 def number(value: float) -> str:

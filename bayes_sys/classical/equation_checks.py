@@ -204,7 +204,7 @@ def _breusch_godfrey(equation: Equation, alone: Alone, periods: Periods) -> Chec
     else:
         sentence = (
             f"The errors carry over from {reach} ({p_value(p)}): intervals are likely too narrow. "
-            "Consider the previous outcome as a regressor, a trend, or errors with autocorrelation."
+            "Consider the previous outcome as a regressor, or a trend."
         )
     return Check("breusch_godfrey", equation.name, p, LEVEL, _verdict(p), sentence)
 

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from bayes_sys.classical import simulated
 from bayes_sys.classical.bases import Bases, solve_upper
-from bayes_sys.classical.check import FINE, NOTE, WARNING, Check, counted, number, p_value
+from bayes_sys.classical.check import CROWDED, FINE, NOTE, SIMULATED, WARNING, Check, counted, number, p_value
 from bayes_sys.classical.estimate import Benchmark, Estimate
 from bayes_sys.classical.estimators import joint_rank
 from bayes_sys.classical.generalised import is_regular
@@ -22,9 +22,6 @@ LEVEL = 0.05
 
 SAME_SPACE = 1e-10
 """A regressor is contained in another equation's if they leave less than this share of it."""
-
-CROWDED = 3.0
-"""Common practice: fewer free periods per equation than this leave a poorly determined error covariance."""
 
 
 def system_checks(
@@ -169,8 +166,9 @@ def _multiplier_test(bases: Bases, n_rows: int, simulations: int, seed: int) -> 
     if simulations:
         drawn = simulated.simulate_multiplier(bases, n_rows, simulations, seed)
         larger = int(np.sum(drawn >= statistic * (1.0 - 1e-12)))
-        p = simulated.monte_carlo_p_value(larger, simulations)
-        yield _shared("shared_shocks_lm_simulated", p, _by_simulation("Breusch-Pagan", simulations, p))
+        exact = simulated.monte_carlo_p_value(larger, simulations)
+        how = _by_simulation("Breusch-Pagan", simulations, exact, p)
+        yield _shared(f"shared_shocks_lm{SIMULATED}", exact, how)
 
 
 def _ratio_test(
@@ -192,14 +190,15 @@ def _ratio_test(
     if possible:
         observed = statistic - 2.0 * simulated.RISE_TOLERANCE
         larger = simulated.count_larger_ratios(bases, n_rows, observed, possible, seed)
-        p = simulated.monte_carlo_p_value(larger, possible)
-        yield _shared("shared_shocks_lr_simulated", p, _by_simulation("likelihood-ratio", possible, p))
+        exact = simulated.monte_carlo_p_value(larger, possible)
+        how = _by_simulation("likelihood-ratio", possible, exact, p)
+        yield _shared(f"shared_shocks_lr{SIMULATED}", exact, how)
     elif simulations:
         sentence = (
             f"With {len(bases.equation)} coefficients the likelihood-ratio test would take too long to "
             "simulate; the simulated Breusch-Pagan test asks the same."
         )
-        yield Check("shared_shocks_lr_simulated", "", None, LEVEL, FINE, sentence)
+        yield Check(f"shared_shocks_lr{SIMULATED}", "", None, LEVEL, FINE, sentence)
 
 
 def _chi_square_tail(statistic: float, n_equations: int) -> float:
@@ -213,10 +212,11 @@ def _by_chi_square(test: str, statistic: float, p: float) -> str:
     )
 
 
-def _by_simulation(test: str, simulations: int, p: float) -> str:
+def _by_simulation(test: str, simulations: int, p: float, approximate: float) -> str:
     return (
         f"By the {test} test ({p_value(p)} from {simulations} simulated systems of this very design with "
-        "Gaussian errors)"
+        f"Gaussian errors; {p_value(approximate)} from the chi-square distribution, which is rough in short "
+        "series)"
     )
 
 

@@ -23,6 +23,13 @@ TABLES = {
     "checks": runs.CHECKS,
     "pooled": runs.POOLED,
 }
+ALWAYS = (
+    runs.STUDY,
+    runs.PRIOR,
+    runs.EXAMINATION,
+    *(file for file in TABLES.values() if file != runs.POOLED),
+)
+"""What every finished run has written; without one of these the page would be silent where it should speak."""
 NAMES = (
     "equation",
     "equation_a",
@@ -78,21 +85,46 @@ def load_content(folder: str | Path, *, manifest: Mapping[str, Any] | None = Non
     Raises
     ------
     RunFolderError
-        If the folder is not one of a run, or a file in it cannot be read.
+        If the folder is not one of a run, or a file in it is missing or cannot be read.
     """
     run = runs.open_run(folder)
     content = dict(run.manifest() if manifest is None else manifest)
-    has_examination = (run.path / runs.EXAMINATION).is_file()
+    check_whole(run.path, content)
     return RunContent(
         manifest=content,
         study=_text(run.path / runs.STUDY),
         card=_text(run.path / runs.PRIOR),
-        examination=tuple(run.read_json(runs.EXAMINATION)) if has_examination else (),
+        examination=tuple(run.read_json(runs.EXAMINATION)),
         tables={
             name: read_table(run.path / file) for name, file in TABLES.items() if (run.path / file).is_file()
         },
         prior_words=tuple(content.get("prior_words") or ()),
     )
+
+
+def check_whole(folder: Path, manifest: Mapping[str, Any]) -> None:
+    """Refuse a run of which something is gone that the page is made from.
+
+    Parameters
+    ----------
+    folder : Path
+    manifest : mapping
+        Its ``files`` name what this very run has written, beside what every run writes.
+
+    Raises
+    ------
+    RunFolderError
+        If a file is missing.
+    """
+    read = {*ALWAYS, *(manifest.get("files") or ())} & {*ALWAYS, *TABLES.values()}
+    missing = sorted(name for name in read if not (folder / name).is_file())
+    if missing:
+        command = manifest.get("command") or "bayes-sys run STUDY"
+        raise RunFolderError(
+            f"the page cannot be made, because something is missing: {', '.join(missing)}.",
+            where=str(folder),
+            mend=f"Put it back, or run again with --overwrite: {command}",
+        )
 
 
 def read_table(path: Path) -> pd.DataFrame:

@@ -1,13 +1,14 @@
 from __future__ import annotations
 
 import json
+import re
 
 import pytest
 from contents import EXAMINATION, MANIFEST, STUDY, make_content
 
 from bayes_sys import runs
 from bayes_sys.errors import RunFolderError
-from bayes_sys.report.content import TABLES, load_content
+from bayes_sys.report.content import ALWAYS, TABLES, load_content
 from bayes_sys.report.page import page
 
 
@@ -54,10 +55,20 @@ def test_a_run_that_has_not_closed_its_manifest_may_bring_it_along(folder):
     assert load_content(path, manifest=content.manifest).manifest["status"] == "complete"
 
 
-def test_tables_that_are_missing_are_left_out(folder):
+@pytest.mark.parametrize("name", ALWAYS)
+def test_a_file_that_every_run_writes_is_named_when_it_is_missing(folder, name):
     path, _ = folder
-    (path / runs.CHECKS).unlink()
-    assert "checks" not in load_content(path).tables
+    (path / name).unlink()
+    with pytest.raises(RunFolderError, match=f"missing: {re.escape(name)}.*--overwrite"):
+        load_content(path)
+
+
+def test_what_only_some_runs_write_is_missed_only_in_those(folder):
+    path, content = folder
+    assert "pooled" not in load_content(path).tables
+    wrote = {**content.manifest, "files": [runs.POOLED, runs.POSTERIOR]}
+    with pytest.raises(RunFolderError, match=r"missing: pooled\.csv\."):
+        load_content(path, manifest=wrote)
 
 
 def test_a_folder_that_is_no_run_is_refused(tmp_path):
