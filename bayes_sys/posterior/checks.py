@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from bayes_sys.posterior.match import check_match
 from bayes_sys.posterior.predictive import predictive_band
 from bayes_sys.posterior.summary import QUANTILES, flat_draws, thinned
 
@@ -162,8 +163,15 @@ def predictive_checks(
         the figure in the data (its posterior mean where it depends on the parameters), the quantiles are
         those of replicated data, ``tail_probability`` is the share of draws in which the replicated figure is
         at least as large as the data's, ties counting half. NaN where a series is too short for the figure.
+
+    Raises
+    ------
+    InputError
+        If posterior and system do not belong together.
     """
     import pandas as pd
+
+    check_match(posterior, system)
 
     low, high = band if band is not None else predictive_band(posterior, system)[1:]
     streams = np.random.SeedSequence(seed).spawn(system.n_equations)

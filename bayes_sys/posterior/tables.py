@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from bayes_sys.posterior.match import check_match
 from bayes_sys.posterior.predictive import predictive_band
 from bayes_sys.posterior.summary import TAIL, Summary, draws_of, flat_draws, summarise
 
@@ -41,9 +42,15 @@ def coefficient_table(
         data. ``n`` counts the periods in which the response was observed. NaN where a figure does not exist:
         the classical estimates when the data cannot give them, the convergence figures of a coefficient that
         a restriction fixes.
+
+    Raises
+    ------
+    InputError
+        If posterior and system do not belong together.
     """
     import pandas as pd
 
+    check_match(posterior, system)
     ours = summarise(draws_of(posterior, "coefficients"))
     classical = benchmark if benchmark is not None else _benchmark(system)
     fgls, fgls_se = _estimate(classical.fgls, system)
@@ -107,9 +114,15 @@ def scale_table(
     DataFrame
         ``equation, mean, sd, q5, q50, q95, fgls, rhat, ess_bulk, ess_tail``, in the units of the response.
         ``fgls`` is the square root of the classical error variance with divisor T.
+
+    Raises
+    ------
+    InputError
+        If posterior and system do not belong together.
     """
     import pandas as pd
 
+    check_match(posterior, system)
     ours = summarise(draws_of(posterior, "scales"))
     covariance = _error_covariance(benchmark if benchmark is not None else _benchmark(system), system)
     return pd.DataFrame(
@@ -138,9 +151,15 @@ def correlation_table(
     DataFrame
         ``equation_a, equation_b, mean, sd, q5, q50, q95, prob_positive, fgls, rhat, ess_bulk, ess_tail``;
         without rows when there is one equation.
+
+    Raises
+    ------
+    InputError
+        If posterior and system do not belong together.
     """
     import pandas as pd
 
+    check_match(posterior, system)
     classical = benchmark if benchmark is not None else _benchmark(system)
     covariance = _error_covariance(classical, system)
     sizes = np.sqrt(np.diag(covariance))
@@ -221,9 +240,15 @@ def fitted_table(
     DataFrame
         ``period, equation, observed, mean, q5, q95, residual``, equation by equation, on the scale
         of the response.
+
+    Raises
+    ------
+    InputError
+        If posterior and system do not belong together.
     """
     import pandas as pd
 
+    check_match(posterior, system)
     mean, low, high = band if band is not None else predictive_band(posterior, system)
     n_periods, n_equations = system.responses.shape
     return pd.DataFrame(
@@ -254,9 +279,15 @@ def equation_table(posterior: xr.DataTree, system: System) -> pd.DataFrame:
     -------
     DataFrame
         ``equation, n, r2_mean, r2_q5, r2_q95``; NaN with fewer than two periods.
+
+    Raises
+    ------
+    InputError
+        If posterior and system do not belong together.
     """
     import pandas as pd
 
+    check_match(posterior, system)
     coefficients, scales = flat_draws(posterior, "coefficients"), flat_draws(posterior, "scales")
     rows = []
     for i, equation in enumerate(system.equations):

@@ -91,6 +91,15 @@ class System:
     notes: tuple[str, ...] = ()
     metadata: Mapping[str, str] = field(default_factory=dict)
 
+    def __repr__(self) -> str:
+        """Say in one line what this system is; its arrays would fill pages."""
+        labels = self.periods.labels
+        span = f" {labels[0]} to {labels[-1]}" if labels else ""
+        return (
+            f"<System {self.title!r}: {self.n_equations} equations, {self.n_periods} periods{span}, "
+            f"{self.n_coefficients} coefficients>"
+        )
+
     @property
     def n_periods(self) -> int:
         """Number of periods in the sample, T."""
