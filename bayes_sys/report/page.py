@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from bayes_sys import runs
+from bayes_sys.classical.check import for_people
 from bayes_sys.report.content import TABLES, RunContent
 from bayes_sys.report.grids import Grid, grid
 from bayes_sys.report.numbers import NOTHING, as_float, counted, fixed, listed, number
@@ -81,6 +82,7 @@ def view(content: RunContent) -> dict[str, Any]:
         "made": made(manifest),
         "scope": scope(content),
         "equations": equations_in_words(content),
+        "together": len(equation_names(content)) > 1,
         "answer": answer(content),
         "gate_sentence": gate_sentence(gate),
         "gate": gate_rows(gate),
@@ -98,6 +100,7 @@ def view(content: RunContent) -> dict[str, Any]:
         "reasons": reasons(manifest),
         "pooled": pooled(content),
         "correlations": correlation_picture(content),
+        "has_classical_correlations": has_values(content, "correlations", "fgls"),
         "scales": scale_picture(content),
         "checks": surprises(content),
         "prior_words": content.prior_words or texts(manifest.get("prior_words")),
@@ -194,7 +197,7 @@ def explained(content: RunContent) -> dict[str, str]:
 def examination(content: RunContent) -> dict[str, list[dict[str, str]]]:
     """Return the verdicts before sampling; one sentence for all equations of which it is true."""
     found: dict[str, dict[tuple[str, str], list[str]]] = {verdict: {} for verdict in VERDICTS}
-    for check in content.examination:
+    for check in for_people(content.examination):
         verdict = str(check.get("verdict") or "")
         key = (str(check.get("name") or ""), str(check.get("sentence") or ""))
         equations = found[verdict if verdict in VERDICTS else "note"].setdefault(key, [])

@@ -6,6 +6,7 @@ import tomllib
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
+from bayes_sys.classical.check import CROWDED
 from bayes_sys.report.numbers import as_float, counted, fixed, listed, number, percent
 
 if TYPE_CHECKING:
@@ -18,6 +19,8 @@ DATA_DECIDE, PRIOR_DECIDES = 0.1, 0.5
 """Share of the prior up to which the data are said to decide, and from which the prior is."""
 MOVED = 1.0
 """Classical standard errors from which a coefficient is said to have moved."""
+LEAST_MOVE = 0.1
+"""Classical standard errors below which no coefficient is singled out as the one that moved furthest."""
 
 
 def answer(content: RunContent) -> list[str]:
@@ -28,7 +31,7 @@ def answer(content: RunContent) -> list[str]:
         sentences.append(shared_shocks(correlations))
     if coefficients is not None and len(coefficients):
         sentences += [signs(coefficients), who_decides(coefficients, pools=_pools(content))]
-        sentences.append(against_classics(coefficients, content))
+        sentences += [thin_errors(coefficients), against_classics(coefficients, content)]
     return [sentence for sentence in sentences if sentence]
 
 
@@ -83,11 +86,20 @@ def _sign_of_one(name: str, rows: pd.DataFrame) -> str:
         return f"{name} is {sign} in {row['equation']} ({number(row['q5'])} to {number(row['q95'])})"
     if not up and not down:
         return f"{name} has no clear sign in any of {n} equations"
-    means = f"(means {number(rows['mean'].min())} to {number(rows['mean'].max())})"
     if n in (up, down):
-        return f"{name} is clearly {'positive' if up else 'negative'} in all {n} equations {means}"
-    parts = [f"{sign} in {k}" for k, sign in ((up, "positive"), (down, "negative")) if k]
-    return f"{name} is clearly {' and '.join(parts)} of {n} equations {means}"
+        return f"{name} is clearly {'positive' if up else 'negative'} in all {n} equations {_means(rows)}"
+    kinds = (("positive", rows[rows["q5"] > 0]), ("negative", rows[rows["q95"] < 0]))
+    if not (up and down):
+        sign, clear = kinds[0] if up else kinds[1]
+        return f"{name} is clearly {sign} in {len(clear)} of {n} equations {_means(clear)}"
+    parts = [f"{sign} in {len(clear)} {_means(clear)}" for sign, clear in kinds]
+    return f"{name} is clearly {' and '.join(parts)} of {n} equations"
+
+
+def _means(rows: pd.DataFrame) -> str:
+    """Say between which values the posterior means of these rows lie."""
+    low, high = number(rows["mean"].min()), number(rows["mean"].max())
+    return f"(mean {low})" if len(rows) == 1 else f"(means {low} to {high})"
 
 
 def _pools(content: RunContent) -> bool:
@@ -98,19 +110,22 @@ def _pools(content: RunContent) -> bool:
 def who_decides(coefficients: pd.DataFrame, *, pools: bool = False) -> str:
     """Say for which coefficients the data decide and for which the prior does.
 
-    Where coefficients are pooled, their prior is the mean they share, which other equations' data inform.
+    The prior's share is one given the error covariance, and the sentence says so. Where coefficients are pooled,
+    their prior is the mean they share, which other equations' data inform.
     """
     known = coefficients[coefficients["shrinkage"].notna()]
     if known.empty:
         return ""
     data = known[known["shrinkage"] <= DATA_DECIDE]
     prior = known[known["shrinkage"] >= PRIOR_DECIDES].sort_values("shrinkage", ascending=False)
-    limit = f"(there the prior’s share is at most {percent(DATA_DECIDE)})"
+    given, limit = "Given the errors’ scales", f"(there the prior’s share is at most {percent(DATA_DECIDE)})"
+    if known["equation"].nunique() > 1:
+        given += " and correlations"
     if len(data) == len(known):
         most = float(known["shrinkage"].max())
         share = "below 1%" if most < 0.01 else f"at most {percent(most)}"
-        return f"The data, not the prior, decide all coefficients: the prior’s share is {share}."
-    start = f"The data decide {len(data)} of {counted(len(known), 'coefficient')} {limit}"
+        return f"{given}, the data and not the prior decide all coefficients: the prior’s share is {share}."
+    start = f"{given}, the data decide {len(data)} of {counted(len(known), 'coefficient')} {limit}"
     if prior.empty:
         return f"{start}; nowhere does the prior have the larger say."
     names = [f"{e}.{r}" for e, r in zip(prior["equation"], prior["regressor"], strict=True)]
@@ -122,24 +137,50 @@ def who_decides(coefficients: pd.DataFrame, *, pools: bool = False) -> str:
     return f"{start}; the prior has the larger say on {listed(names, 4)}: the data say little about these."
 
 
+def thin_errors(coefficients: pd.DataFrame) -> str:
+    """Say where few free periods leave the error covariance, and with it the intervals, largely to the prior.
+
+    Parameters
+    ----------
+    coefficients : DataFrame
+        Its column ``n`` counts the periods of each equation; without it nothing can be said.
+    """
+    if "n" not in coefficients:
+        return ""
+    groups = coefficients.groupby("equation", sort=False)
+    free, n_equations = int((groups["n"].first() - groups.size()).min()), groups.ngroups
+    if free >= CROWDED * n_equations:
+        return ""
+    what = "the errors’ scales and correlations are" if n_equations > 1 else "the errors’ scale is"
+    left = f"leaves {counted(free, 'free period')}" if free > 0 else "leaves no free period"
+    where = f"The equation with the most coefficients {left}"
+    if n_equations > 1:
+        where += f" against {n_equations} equations"
+    part = "in good part" if free < n_equations else "in part"
+    return (
+        f"{where}, so {what} decided {part} by the prior, and through them the coefficients’ intervals. "
+        "See whether another prior on the errors gives other answers."
+    )
+
+
 def against_classics(coefficients: pd.DataFrame, content: RunContent) -> str:
     """Say how far the coefficients lie from the classical joint estimate, or why there is none."""
     moved = coefficients["moved_se"]
+    single = coefficients["equation"].nunique() == 1
+    classic = "least-squares estimate" if single else "classical joint estimate (FGLS)"
     if moved.notna().sum() == 0:
         reason = str((content.manifest.get("reasons") or {}).get("fgls") or "").strip()
-        return f"There is no classical joint estimate (FGLS) to compare with. {reason}".strip()
+        return f"There is no {classic} to compare with. {reason}".strip()
     far = coefficients.iloc[int(moved.abs().fillna(-1.0).argmax())]
     count = int((moved.abs() > MOVED).sum())
-    name = f"{far['equation']}.{far['regressor']}"
-    if count == 0:
-        return (
-            "No coefficient lies more than one classical standard error from the classical joint estimate "
-            f"(FGLS); the furthest is {name}, by {fixed(abs(far['moved_se']), 1)}."
-        )
-    lie = "coefficients lies" if count == 1 else "coefficients lie"
+    most = float(abs(far["moved_se"]))
+    if most < LEAST_MOVE:
+        return f"Every coefficient lies within {LEAST_MOVE:g} classical standard errors of the {classic}."
+    lie = "No coefficient lies" if count == 0 else f"{count} of {len(coefficients)} coefficients "
+    lie += {0: "", 1: "lies"}.get(count, "lie")
     return (
-        f"{count} of {len(coefficients)} {lie} more than one classical standard error from the classical "
-        f"joint estimate (FGLS); the furthest is {name}, by {fixed(abs(far['moved_se']), 1)}."
+        f"{lie} more than one classical standard error from the {classic}; the furthest is "
+        f"{far['equation']}.{far['regressor']}, by {fixed(most, 1)}."
     )
 
 

@@ -51,10 +51,51 @@ def test_signs_are_counted_by_regressor_and_the_constant_is_left_out():
     )
     text = words.signs(table)
     assert "tariff is clearly negative in all 2 equations (means −0.400 to −0.200)" in text
-    assert "heat is clearly positive in 1 of 2 equations" in text
+    assert "heat is clearly positive in 1 of 2 equations (mean 0.200)" in text
     assert "rain is of open sign in a (−0.100 to 0.300)" in text
     assert "intercept" not in text
     assert text.index("tariff") < text.index("heat") < text.index("rain"), "the clearest first"
+
+
+def test_the_range_of_the_means_is_that_of_the_equations_spoken_of():
+    rows = [("a", 1.2, 0.9, 1.5), ("b", 0.8, 0.4, 1.2), ("c", 0.1, -0.4, 0.6), ("d", -0.7, -0.9, -0.5)]
+    table = coefficients(*((e, "price", *values, 0.1, 0.0) for e, *values in rows))
+    assert words.signs(table) == (
+        "Signs at 90%: price is clearly positive in 2 (means 0.800 to 1.20) and negative in 1 (mean −0.700) of "
+        "4 equations."
+    )
+    assert "positive in 2 of 3 equations (means 0.800 to 1.20)" in words.signs(table[:3])
+
+
+def crowd(n_equations, n_periods, n_coefficients):
+    return pd.DataFrame(
+        {
+            "equation": np.repeat([f"u{i}" for i in range(n_equations)], n_coefficients),
+            "n": n_periods,
+        }
+    )
+
+
+def test_few_free_periods_are_said_to_leave_the_errors_to_the_prior():
+    assert words.thin_errors(crowd(6, 10, 6)).startswith(
+        "The equation with the most coefficients leaves 4 free periods against 6 equations, so the errors’ scales "
+        "and correlations are decided in good part by the prior"
+    )
+    assert "in part by the prior" in words.thin_errors(crowd(4, 16, 5))
+    assert "leaves no free period" in words.thin_errors(crowd(2, 4, 5))
+    one = words.thin_errors(crowd(1, 5, 3))
+    assert "the errors’ scale is" in one and "correlation" not in one and "against" not in one
+    assert words.thin_errors(crowd(4, 17, 5)) == "", "three free periods an equation are enough"
+
+
+def test_one_equation_is_held_against_least_squares_and_nothing_is_said_of_correlations():
+    table = coefficients(
+        ("only", "x", 0.0, -1.0, 1.0, 0.01, 0.01), ("only", "z", 0.0, -1.0, 1.0, 0.02, -0.04)
+    )
+    assert words.against_classics(table, RunContent()) == (
+        "Every coefficient lies within 0.1 classical standard errors of the least-squares estimate."
+    )
+    assert words.who_decides(table).startswith("Given the errors’ scales, the data and not the prior")
 
 
 def test_for_pooled_coefficients_the_prior_is_the_mean_they_share():
@@ -68,7 +109,7 @@ def test_who_decides_is_read_off_the_shares():
     share = [0.05, 0.3, 0.7, 0.9]
     table = coefficients(*((f"u{i}", "x", 0.0, -1.0, 1.0, s, 0.0) for i, s in enumerate(share)))
     text = words.who_decides(table)
-    assert text.startswith("The data decide 1 of 4 coefficients")
+    assert text.startswith("Given the errors’ scales and correlations, the data decide 1 of 4 coefficients")
     assert "the prior has the larger say on u3.x and u2.x" in text
     assert words.who_decides(table.assign(shrinkage=[0.01, 0.02, 0.03, 0.08])).endswith("is at most 8%.")
     assert words.who_decides(table.assign(shrinkage=0.001)).endswith("is below 1%.")

@@ -8,10 +8,11 @@ import re
 import warnings
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.axis import Axis
     from matplotlib.figure import Figure
 
 # Okabe & Ito (2008), Color Universal Design: told apart with any of the usual colour-vision deficiencies.
@@ -99,6 +100,27 @@ def axes_at(figure: Figure, left: float, top: float, width: float, height: float
     )
     axes.spines[["top", "right"]].set_visible(False)
     return axes
+
+
+def show_power(axes: Axes, axis: Axis, *, side: Literal["left", "right"]) -> None:
+    """Write the power of ten that an axis leaves out of its labels above the axes, where nothing cuts it off."""
+    axis.get_offset_text().set_visible(False)
+    formatter = axis.get_major_formatter()
+    formatter.set_locs(list(axis.get_majorticklocs()))
+    power = formatter.get_offset()
+    if power:
+        place, text = 0.0 if side == "left" else 1.0, power if power[0] in "+\N{MINUS SIGN}-" else f"×{power}"
+        axes.annotate(
+            text,
+            (place, 1.0),
+            xycoords="axes fraction",
+            xytext=(0, 2),
+            textcoords="offset points",
+            ha=side,
+            va="baseline",
+            fontsize=8.5,
+            color=MUTED,
+        )
 
 
 def compact(svg: str) -> str:

@@ -19,6 +19,7 @@ from bayes_sys.report.plots.canvas import (
     Picture,
     axes_at,
     picture,
+    show_power,
 )
 
 if TYPE_CHECKING:
@@ -143,6 +144,7 @@ def _frame(axes: Axes, rows: Rows, low: float, high: float) -> None:
     axes.spines["left"].set_visible(False)
     if axes.get_xscale() == "linear":
         axes.xaxis.set_major_locator(MaxNLocator(4))
+        show_power(axes, axes.xaxis, side="right")
     for line in np.arange(count - 1) + 0.5:
         axes.axhline(line, color=PALE, linewidth=0.8, zorder=0)
 

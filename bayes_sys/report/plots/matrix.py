@@ -39,7 +39,8 @@ def matrix_picture(names: tuple[str, ...], table: pd.DataFrame) -> Picture:
     """Draw all pairs as the lower triangle of a matrix.
 
     Each cell is a scale from -1 (left edge) over 0 (middle) to 1 (right edge); a bar spans the 90% interval
-    and a dot stands at the mean. The bar has a colour only where the interval leaves nought out.
+    and a dot stands at the mean; a square below marks the classical (FGLS) correlation where there is one. The bar
+    has a colour only where the interval leaves nought out.
 
     Parameters
     ----------
@@ -63,6 +64,7 @@ def matrix_picture(names: tuple[str, ...], table: pd.DataFrame) -> Picture:
         rows, columns, values = _cells(names, table)
         _grounds(axes, rows, columns, values, len(names))
         _bars(axes, rows, columns, values, len(names))
+        _classical(axes, rows, columns, _fgls(table), len(names))
         if len(names) <= TIGHT:
             _numbers(axes, rows, columns, values, len(names))
 
@@ -128,6 +130,20 @@ def _bars(axes: Axes, rows: Array, columns: Array, values: Array, n_equations: i
     size = {True: 6.0, False: 3.5}[n_equations <= ROOMY]
     means = columns + 0.5 + 0.46 * values[:, 0]
     axes.plot(means, at, "o", color="white", markeredgecolor=INK, markeredgewidth=1.2, markersize=size)
+
+
+def _fgls(table: pd.DataFrame) -> Array:
+    """Return the classical correlation of every pair, NaN where there is none."""
+    return table["fgls"].to_numpy(dtype=float) if "fgls" in table else np.full(len(table), np.nan)
+
+
+def _classical(axes: Axes, rows: Array, columns: Array, fgls: Array, n_equations: int) -> None:
+    """Mark the classical correlation on the scale of its cell, below the interval."""
+    size = 4.5 if n_equations <= ROOMY else 3.5 if n_equations <= TIGHT else 2.2
+    look: dict[str, Any] = {"markerfacecolor": "white", "markeredgecolor": INK, "markeredgewidth": 1.1}
+    at = columns + 0.5 + 0.46 * fgls
+    known = np.isfinite(fgls)
+    axes.plot(at[known], rows[known] + 0.87, "s", linestyle="none", markersize=size, **look)
 
 
 def _numbers(axes: Axes, rows: Array, columns: Array, values: Array, n_equations: int) -> None:

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from bayes_sys.report.numbers import counted, cut
-from bayes_sys.report.plots.canvas import BLUE, INK, SKY, VERMILION, Picture, axes_at, picture
+from bayes_sys.report.plots.canvas import BLUE, INK, SKY, VERMILION, Picture, axes_at, picture, show_power
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -124,6 +124,7 @@ def _label(axes: Axes, series: Series) -> None:
     from matplotlib.ticker import MaxNLocator
 
     axes.yaxis.set_major_locator(MaxNLocator(4))
+    show_power(axes, axes.yaxis, side="left")
     axes.grid(axis="y", color="#eef0f3", linewidth=0.8)
     axes.set_axisbelow(True)
     longest = max(len(label) for label in series.labels)
