@@ -125,14 +125,14 @@ def who_decides(coefficients: pd.DataFrame, *, pools: bool = False) -> str:
         most = float(known["shrinkage"].max())
         share = "below 1%" if most < 0.01 else f"at most {percent(most)}"
         return f"{given}, the data and not the prior decide all coefficients: the prior’s share is {share}."
-    start = f"{given}, the data decide {len(data)} of {counted(len(known), 'coefficient')} {limit}"
+    start = f"{given}, the data decide {len(data) or 'none'} of {counted(len(known), 'coefficient')} {limit}"
     if prior.empty:
         return f"{start}; nowhere does the prior have the larger say."
     names = [f"{e}.{r}" for e, r in zip(prior["equation"], prior["regressor"], strict=True)]
     if pools:
         return (
             f"{start}; the prior, which for pooled coefficients is the mean they share, has the larger say on "
-            f"{listed(names, 4)}: the equation's own data say little about these."
+            f"{listed(names, 4)}: the equation’s own data say little about these."
         )
     return f"{start}; the prior has the larger say on {listed(names, 4)}: the data say little about these."
 

@@ -8,7 +8,7 @@ import pytest
 import scipy.stats
 from helpers import make_system
 
-from bayes_sys.classical.check import Check
+from bayes_sys.classical.check import Check, addressed, for_people, p_value
 from bayes_sys.classical.estimators import classical_estimates
 from bayes_sys.classical.examination import examination_rows, examine
 from bayes_sys.study.periods import Periods
@@ -321,3 +321,34 @@ def test_the_examination_is_quick_at_ordinary_sizes():
         start = time.perf_counter()
         examine(system, benchmark)
         assert time.perf_counter() - start < 10.0
+
+
+def test_people_read_each_test_of_shared_shocks_once_with_both_p_values():
+    checks = checks_of(system_of(10, (3, 3), 40, shared=0.3), simulations=200)
+    rows = examination_rows(checks.values())
+    shown = {row["name"]: row for row in for_people(rows)}
+    assert {row["name"] for row in rows} - shown.keys() == {"shared_shocks_lm", "shared_shocks_lr"}
+    for name in ("shared_shocks_lm", "shared_shocks_lr"):
+        both, sentence = checks[f"{name}_simulated", ""], shown[f"{name}_simulated"]["sentence"]
+        assert p_value(both.figure) in sentence
+        assert f"{p_value(checks[name, ''].figure)} from the chi-square distribution" in sentence
+
+
+def test_a_test_that_could_not_be_simulated_is_shown_by_its_approximation():
+    rows = [
+        {"name": "shared_shocks_lr", "equation": "", "figure": 0.2},
+        {"name": "shared_shocks_lr_simulated", "equation": "", "figure": None},
+    ]
+    assert for_people(rows) == rows
+
+
+def test_a_sentence_is_said_once_with_the_equations_it_speaks_of():
+    rows = [{"equation": e, "sentence": s} for e, s in (("u1", "A."), ("", "B."), ("u2", "A."), ("u2", "C."))]
+    assert addressed(rows) == ["u1, u2: A.", "B.", "u2: C."]
+
+
+def test_no_check_advises_what_this_version_refuses():
+    rng = np.random.default_rng(3)
+    carried = np.cumsum(rng.normal(size=(60, 2)), axis=0)
+    sentence = checks_of(make_system([np.ones((60, 1))] * 2, carried))["breusch_godfrey", "a"].sentence
+    assert "carry over" in sentence and "errors with autocorrelation" not in sentence

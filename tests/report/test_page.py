@@ -215,3 +215,26 @@ def test_what_pooled_coefficients_share_is_shown_only_where_something_is_pooled(
     assert "What pooled coefficients share" in shown
     assert "&lt;b&gt;x&lt;/b&gt;" in shown and "<b>x</b>" not in shown
     assert "−0.551 (−0.900 to −0.100)" in shown
+
+
+def test_the_page_of_one_equation_says_nothing_of_other_equations():
+    text = page(make_content(("only",), n_draws=10))
+    assert "1 equation ·" in text and "1 equations" not in text
+    assert "estimated together" not in text and "between equations" not in text
+    assert "correlation of the shocks" not in text
+
+
+def test_the_page_says_a_finding_once_that_two_checks_make(content):
+    names = ("shared_shocks_lm", "shared_shocks_lm_simulated")
+    rows = [
+        {"name": n, "equation": "", "figure": 0.3, "verdict": "note", "sentence": f"From {n}."} for n in names
+    ]
+    text = page(replace(content, examination=tuple(rows)))
+    assert "From shared_shocks_lm_simulated." in text and "From shared_shocks_lm." not in text
+
+
+def test_the_classical_mark_is_explained_only_where_there_is_one(content, html):
+    assert "classical (FGLS)" in html
+    table = content.tables["correlations"].assign(fgls=np.nan)
+    without = page(replace(content, tables={**content.tables, "correlations": table}))
+    assert "classical (FGLS)" not in without

@@ -46,6 +46,19 @@ def test_the_page_never_scrolls_sideways(browser, pages, name, width):
     tab.close()
 
 
+@pytest.mark.parametrize("width", [390, 1200])
+def test_a_badge_stays_on_one_line(browser, pages, width):
+    tab = browser.new_page(viewport={"width": width, "height": 800})
+    tab.goto((pages / "good.html").as_uri())
+    tab.evaluate("document.querySelectorAll('.verdicts .chip').forEach(c => c.textContent = 'Surprising')")
+    heights = tab.evaluate(
+        "[...document.querySelectorAll('.verdicts .chip')].map(c => c.getClientRects()[0].height)"
+    )
+    line = 0.8 * 16 * 1.5 + 2  # font size, line height and borders of the style sheet
+    assert heights and max(heights) < 1.2 * line
+    tab.close()
+
+
 def test_the_page_asks_for_nothing_but_itself(browser, pages):
     tab = browser.new_page()
     asked = []

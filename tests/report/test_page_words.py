@@ -114,6 +114,7 @@ def test_who_decides_is_read_off_the_shares():
     assert words.who_decides(table.assign(shrinkage=[0.01, 0.02, 0.03, 0.08])).endswith("is at most 8%.")
     assert words.who_decides(table.assign(shrinkage=0.001)).endswith("is below 1%.")
     assert words.who_decides(table.assign(shrinkage=np.nan)) == ""
+    assert "the data decide none of 4 coefficients" in words.who_decides(table.assign(shrinkage=0.3))
 
 
 def test_distance_from_the_classics_counts_standard_errors_or_says_why_not():

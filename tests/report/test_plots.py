@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import re
 import xml.etree.ElementTree as ET
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
@@ -9,7 +10,9 @@ import pytest
 from contents import make_content
 
 from bayes_sys.report import pictures
+from bayes_sys.report.plots import matrix
 from bayes_sys.report.plots.canvas import axes_at, picture
+from bayes_sys.report.plots.matrix import matrix_picture
 from bayes_sys.report.plots.series import positions, series_of
 
 HOSTILE = ("<script>alert(1)</script>", "$x_1$ & co", "水道", "NA")
@@ -125,3 +128,37 @@ def test_a_classical_estimate_far_away_does_not_squeeze_the_posterior():
     (_, panel) = pictures.coefficient_pictures(far)[-1]
     ticks = [t for t in shown(panel.svg) if t and re.fullmatch(r"[−\d.]+", t)]
     assert all(abs(float(t.replace("−", "-"))) < 100 for t in ticks)
+
+
+@pytest.mark.parametrize("n_equations", [3, 10, 16])
+def test_every_classical_correlation_has_a_mark_at_its_value(n_equations):
+    content = make_content(tuple(f"u{i}" for i in range(n_equations)), n_draws=5, n_periods=40)
+    table = content.tables["correlations"]
+    names = pictures.equation_names(content)
+
+    def squares(fgls):
+        svg = matrix_picture(names, table.assign(fgls=fgls)).svg
+        return [float(x) for x in re.findall(r'<use xlink:href="#[^"]*" x="([^"]*)"', svg)]
+
+    # a mark at 1 stands 0.92 of a cell to the right of one at -1
+    right, left, none = squares(1.0), squares(-1.0), squares(np.nan)
+    assert len(right) == len(left) == len(none) + len(table)
+    moved = np.sort(right).sum() - np.sort(left).sum()
+    assert moved == pytest.approx(0.92 * matrix.cell_size(n_equations)[0] * len(table), rel=0.01)
+
+
+def test_the_power_of_ten_of_an_axis_stands_inside_the_picture():
+    content = make_content(("a", "b"), n_draws=10)
+    numbers = ["mean", "q5", "q95"]
+    fitted, table = content.tables["fitted"].copy(), content.tables["coefficients"].copy()
+    fitted[["observed", *numbers]] *= 1e101
+    table[[*numbers, "fgls", "fgls_se", "ols", "prior_mean", "prior_sd"]] *= 1e101
+    content = replace(content, tables={"fitted": fitted, "coefficients": table})
+    found = [p for _, p, _ in pictures.series_pictures(content)]
+    found += [p for _, p in pictures.coefficient_pictures(content)]
+    for one in found:
+        (place,) = re.findall(
+            r'<text [^>]*?(?:y="([\d.]+)"|translate\([\d.]+ ([\d.]+)\))[^>]*>×1e10', one.svg
+        )
+        # the foot of digits that are 7 pixels high
+        assert 7 <= float(place[0] or place[1]) < one.height

@@ -50,7 +50,7 @@ def matrix_picture(names: tuple[str, ...], table: pd.DataFrame) -> Picture:
         As in ``correlations.csv``.
     """
     count = len(names) - 1
-    width, height = _cell(len(names))
+    width, height = cell_size(len(names))
     letters = 20 if len(names) <= TIGHT else 16
     gutter = 14 + 6.3 * max(len(cut(name, letters)) for name in names)
     below = 20 + (16 if len(names) <= ROOMY else gutter)
@@ -71,7 +71,7 @@ def matrix_picture(names: tuple[str, ...], table: pd.DataFrame) -> Picture:
     return picture(*total, draw, _in_words(table))
 
 
-def _cell(n_equations: int) -> tuple[float, float]:
+def cell_size(n_equations: int) -> tuple[float, float]:
     """Return width and height of a cell in pixels."""
     if n_equations <= ROOMY:
         return (96.0, 58.0) if n_equations <= 6 else (88.0, 54.0)
