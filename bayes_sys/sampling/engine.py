@@ -76,6 +76,11 @@ def sample(
     """
     from bayes_sys.sampling.tree import posterior_tree
 
+    if not isinstance(system, System) or not isinstance(card, PriorCard):
+        raise InputError(
+            f"expected a System and a PriorCard, got {type(system).__name__} and {type(card).__name__}.",
+            mend="Call sample(build_system(study), study_card(study)).",
+        )
     prior = resolve(card, system)
     settings = Settings(chains, warmup, draws, seed, target_accept, cores)
     if settings.target_accept is None:

@@ -174,6 +174,11 @@ def test_a_covariance_that_becomes_singular_is_said_in_words(system, card, monke
         sample(system, card)
 
 
+def test_arguments_in_the_wrong_order_are_refused_in_words(system, card):
+    with pytest.raises(InputError, match="expected a System and a PriorCard"):
+        sample(card, system)
+
+
 def test_one_equation_alone_passes_the_gate_with_room():
     rng = np.random.default_rng(0)
     x = np.column_stack([np.ones(20), rng.normal(size=20)])
