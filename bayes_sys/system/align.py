@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -13,7 +14,8 @@ from bayes_sys.study.read import refuse_unbuilt
 from bayes_sys.study.table import read_panel
 from bayes_sys.system.design import check_design
 from bayes_sys.system.moments import factorise
-from bayes_sys.system.sample import Mask, choose_sample, fetch
+from bayes_sys.system.sample import Mask, check_sizes, choose_sample, fetch
+from bayes_sys.system.simultaneous import find_links, link_notes, refuse_loops
 from bayes_sys.system.system import INTERCEPT, Equation, ErrorModel, System
 
 if TYPE_CHECKING:
@@ -52,6 +54,7 @@ def build_system(study: Study, table: pd.DataFrame | None = None) -> System:
     panel = read_panel(study, table)
     plans = [plan_equation(study, name) for name in panel.equations]
     keep, notes = choose_sample(study, panel, plans)
+    check_sizes(panel, plans, keep)
     equations = tuple(make_equation(panel, plan, keep) for plan in plans)
     responses = np.column_stack([fetch(panel, p.name, p.response)[keep] for p in plans])
     system = System(
@@ -65,7 +68,9 @@ def build_system(study: Study, table: pd.DataFrame | None = None) -> System:
         metadata={"study": study.label, "data": panel.source},
     )
     check_design(system, source=panel.source)
-    return system
+    links = find_links(system, panel, wide=study.data.is_wide)
+    refuse_loops(system, links, where=study.label)
+    return replace(system, notes=(*notes, *link_notes(system, links)))
 
 
 def make_equation(panel: Panel, plan: EquationPlan, keep: Mask) -> Equation:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
@@ -20,6 +21,10 @@ if TYPE_CHECKING:
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
+
+LARGEST_SIZE, SMALLEST_SIZE = 1e70, 1e-70
+"""Sizes of columns that can be worked with: a slope between the two extremes is 1e140, and its variance still
+stays clear of the limits of double precision (about 1e308 and 1e-308)."""
 
 SHOWN = 12
 """How many periods or cells a message lists before it counts the rest."""
@@ -135,6 +140,24 @@ def check_infinite(panel: Panel, plans: Sequence[EquationPlan], keep: Mask) -> N
                     where=panel.source,
                     mend="Mend the cell, or look for a division by zero or a logarithm of zero behind it.",
                 )
+
+
+def check_sizes(panel: Panel, plans: Sequence[EquationPlan], keep: Mask) -> None:
+    """Refuse a column so large or so small that products of its values leave the range of numbers."""
+    for plan in plans:
+        for column in columns_of(plan):
+            largest = float(np.abs(fetch(panel, plan.name, column)[keep]).max())
+            if largest == 0.0 or SMALLEST_SIZE <= largest <= LARGEST_SIZE:
+                continue
+            found = "reaches" if largest > 1 else "reaches no more than"
+            factor = f"1e{-math.floor(math.log10(largest))}"
+            raise DesignError(
+                f"the column “{column}” of equation “{plan.name}” {found} {largest:.3g}; sizes from "
+                f"{SMALLEST_SIZE:g} to {LARGEST_SIZE:g} can be worked with.",
+                where=panel.source,
+                mend=f'Put it into other units in [derive]: {{ from = "{column}", '
+                f"steps = [{{ scale = {factor} }}] }}.",
+            )
 
 
 def check_missing(study: Study, panel: Panel, plans: Sequence[EquationPlan], keep: Mask) -> None:

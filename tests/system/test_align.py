@@ -219,7 +219,7 @@ def test_periods_several_years_apart_are_noted() -> None:
 
 LAGGED = {
     "log_tariff_2": {"from": "tariff", "steps": ["log", {"lag": 2}]},
-    "growth": {"from": "demand", "steps": ["log", "diff"]},
+    "growth": {"from": "tariff", "steps": ["log", "diff"]},
     "mean_heat": {"from": "heat", "steps": [{"rolling_mean": 3}]},
 }
 
@@ -431,3 +431,38 @@ def test_one_equation_builds() -> None:
 def test_what_is_not_built_yet_is_refused() -> None:
     with pytest.raises(NotBuiltError, match="student_t"):
         build(long_study(errors={"family": "student_t"}), long_table())
+
+
+@pytest.mark.parametrize(
+    ("name", "factor"), [("heat", 1e155), ("demand", 1e300), ("tariff", 1e-200), ("heat", 1e-120)]
+)
+def test_a_column_too_large_or_too_small_to_square_is_named_with_the_scale_that_mends_it(
+    name: str, factor: float
+) -> None:
+    table = long_table()
+    table[name] *= factor
+    content = long_study(every_equation={"response": "demand", "regressors": ["tariff", "heat"]})
+    text = refusal(content, table)
+    assert f"the column “{name}”" in text
+    scale = float(text.split("scale = ")[1].split(" ")[0])
+    content["derive"]["mended"] = {"from": name, "steps": [{"scale": scale}]}
+    every = content["every_equation"]
+    every["response"] = "mended" if name == "demand" else "demand"
+    every["regressors"] = ["mended" if r == name else r for r in every["regressors"]]
+    system = build(content, table)
+    used = np.hstack([system.responses, *(e.design for e in system.equations)])
+    assert np.abs(used).max() < 1e3
+
+
+def test_zeros_are_no_small_numbers() -> None:
+    table = long_table()
+    table["heat"] = np.where(table["year"] > 2005, 1.0, 0.0)
+    assert build(long_study(), table).n_equations == 3
+
+
+def test_columns_at_both_ends_of_the_range_are_still_built() -> None:
+    table = long_table()
+    table["demand"] *= 1e67
+    table["heat"] *= 1e-69
+    content = long_study(every_equation={"response": "demand", "regressors": ["tariff", "heat"]})
+    assert np.isfinite(build(content, table).factor.triangle).all()
