@@ -14,6 +14,9 @@ from bayes_sys.study.spec_base import show
 
 _BARE = re.compile(r"[A-Za-z0-9_-]+")
 
+UNBUILT = ("restriction", "contrast", "scenario", "aggregate", "risk", "threshold")
+"""Sections that are read and checked, but that this version can do nothing with."""
+
 _EXPECTED = {
     "string_type": "text in quotes",
     "int_type": "a whole number",
@@ -94,6 +97,8 @@ def study_error(error: ValidationError, model: type[BaseModel], label: str) -> S
     if others:
         shown = ", ".join(dict.fromkeys(others[:4]))
         mend = f"{mend} Also to mend: {shown}{' …' if len(others) > 4 else ''}.".strip()
+    if parts and parts[0] in UNBUILT:
+        mend = f"{mend} Mending it is not enough: this version cannot do [{parts[0]}] yet, so take it out.".strip()
     path = key_path(parts)
     return StudyError(what, where=f"{label}, {path}" if path else label, mend=mend)
 

@@ -11,8 +11,9 @@ from typing import Any
 
 from pydantic import ValidationError
 
-from bayes_sys.errors import NotBuiltError, StudyError
-from bayes_sys.study.faults import key_path, study_error
+from bayes_sys.errors import NotBuiltError, StudyError, nearest
+from bayes_sys.shipped import card_names
+from bayes_sys.study.faults import UNBUILT, key_path, study_error
 from bayes_sys.study.spec import Study, StudyFile
 
 LARGEST_STUDY = 5_000_000
@@ -81,11 +82,9 @@ def refuse_unbuilt(study: Study) -> None:
     NotBuiltError
         One error that names every such section.
     """
-    found = [name for name in ("restriction", "contrast") if getattr(study, name)]
-    shown = [f"[[{name}]]" for name in found]
-    shown += [f"[{s}.{key_path((n,))}]" for s in ("scenario", "aggregate") for n in getattr(study, s)]
-    shown += ["[risk]"] if study.risk is not None else []
-    shown += ["[threshold]"] if study.threshold else []
+    # By presence and not by content: an empty table is a wish as well.
+    written = [name for name in UNBUILT if name in study.content or getattr(study, name)]
+    shown = [heading for name in written for heading in _headings(study, name)]
     shown += ['errors.family = "student_t"'] if study.errors.family == "student_t" else []
     shown += ['errors.autocorrelation = "ar1"'] if study.errors.autocorrelation == "ar1" else []
     if shown:
@@ -94,6 +93,25 @@ def refuse_unbuilt(study: Study) -> None:
             where=study.label,
             mend="Take these out; everything else in the study can be run.",
         )
+
+
+def _headings(study: Study, name: str) -> list[str]:
+    """Return the headings under which a section stands in a study."""
+    if name in ("restriction", "contrast"):
+        return [f"[[{name}]]"]
+    inside = getattr(study, name) if name in ("scenario", "aggregate") else ()
+    return [f"[{name}.{key_path((n,))}]" for n in inside] or [f"[{name}]"]
+
+
+def _check_cards(study: Study) -> None:
+    """Refuse a card of [compare] that is neither shipped nor a file."""
+    for i, card in enumerate(study.compare.cards):
+        if card not in card_names() and not (study.folder / Path(card).expanduser()).is_file():
+            raise StudyError(
+                f"there is no prior card “{card}”: neither one that comes with the package, nor a file.",
+                where=study.at(f"compare.cards[{i}]"),
+                mend=f"{nearest(card, card_names())} A path is relative to the study file.",
+            )
 
 
 def _build(content: dict[str, Any], *, source: Path | None, folder: Path, text: str) -> Study:
@@ -105,7 +123,9 @@ def _build(content: dict[str, Any], *, source: Path | None, folder: Path, text: 
         raise study_error(error, StudyFile, label) from None
     values = {name: getattr(parts, name) for name in StudyFile.model_fields}
     values["title"] = parts.title.strip() or (source.stem if source is not None else "Untitled study")
-    return Study(**values, source=source, folder=folder, text=text, content=content)
+    study = Study(**values, source=source, folder=folder, text=text, content=content)
+    _check_cards(study)
+    return study
 
 
 def _read_bytes(path: Path) -> bytes:

@@ -467,3 +467,32 @@ def test_sampling_gate_and_compare_are_no_hindrance() -> None:
     refuse_unbuilt(
         make_study(with_part(sampling={"chains": 2}, gate={"ess": 10}, compare={"cards": ["vague"]}))
     )
+
+
+@pytest.mark.parametrize("section", ["scenario", "aggregate", "threshold", "risk"])
+def test_an_empty_section_that_is_not_built_yet_is_refused_as_a_full_one(section: str) -> None:
+    with pytest.raises(NotBuiltError, match=rf"\[{section}\]"):
+        refuse_unbuilt(make_study(with_part(**{section: {}})))
+
+
+@pytest.mark.parametrize(
+    ("section", "content"),
+    [
+        ("restriction", [{"equal": ["Alder.price"]}]),
+        ("contrast", [{"name": "a"}]),
+        ("scenario", {"dry": {"fil": "x.csv"}}),
+        ("threshold", {"Alder": "high"}),
+    ],
+)
+def test_a_fault_in_a_section_that_is_not_built_yet_says_so_before_it_is_mended(
+    section: str, content: Any
+) -> None:
+    with pytest.raises(StudyError, match=rf"cannot do \[{section}\] yet"):
+        make_study(with_part(**{section: content}))
+
+
+def test_cards_to_compare_must_exist(tmp_path: Path) -> None:
+    (tmp_path / "mine.toml").touch()
+    make_study(with_part(compare={"cards": ["vague", "mine.toml"]}), folder=tmp_path)
+    with pytest.raises(StudyError, match=r"compare\.cards\[1\].*“vageu”.*“vague”"):
+        make_study(with_part(compare={"cards": ["mine.toml", "vageu"]}), folder=tmp_path)
