@@ -47,10 +47,10 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, Self
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+from pydantic import BaseModel, ConfigDict, Field, PrivateAttr, ValidationError, model_validator
 
 from bayes_sys.errors import CardError, nearest
-from bayes_sys.prior.complaints import Complaint, card_error
+from bayes_sys.prior.complaints import Complaint, card_error, heading_of, written_in
 from bayes_sys.prior.families import FAMILIES_OF_TABLE
 from bayes_sys.shipped import card_names, priors_folder
 
@@ -224,6 +224,14 @@ class PriorCard(BaseModel):
     correlation: CorrelationTable
     autocorrelation: AutocorrelationTable | None = None
     tails: TailsTable | None = None
+    _laid_over: Mapping[str, Any] = PrivateAttr(default_factory=dict)
+    _study: str = PrivateAttr(default="")
+
+    def place(self, path: tuple[str, ...], key: str = "") -> str:
+        """Return where a line (and a key of it) stands, for messages: in the card, or the study laid over it."""
+        if self._study and written_in(self._laid_over, (*path, key) if key else path):
+            return f"{self._study}, {heading_of(('prior', *path))}"
+        return f"prior card “{self.name}”, {heading_of(path)}"
 
     @model_validator(mode="after")
     def _no_point_in_a_scaled_card(self) -> Self:
@@ -322,16 +330,18 @@ def study_card(study: Study) -> PriorCard:
     CardError
         As in `read_card`; the message says whether the study or the card is at fault.
     """
-    path = _find(study.prior.card, study.folder)
+    path = _find(study.prior.card, study.folder, where=study.at("prior.card"))
     data = _load(path)
     overrides = dict(study.prior.overrides)
     if not overrides:
         return build_card(data, where=path.name)
     merged = _lay_over(data, overrides, ())
     try:
-        return PriorCard.model_validate(merged)
+        card = PriorCard.model_validate(merged)
     except ValidationError as problem:
-        raise card_error(problem, merged, path.name, overrides=overrides) from None
+        raise card_error(problem, merged, path.name, overrides=overrides, study=study.label) from None
+    card._laid_over, card._study = overrides, study.label
+    return card
 
 
 def _lay_over(base: Mapping[str, Any], top: Mapping[str, Any], path: tuple[str, ...]) -> dict[str, Any]:
@@ -351,7 +361,7 @@ def _lay_over(base: Mapping[str, Any], top: Mapping[str, Any], path: tuple[str, 
     return merged
 
 
-def _find(name_or_path: str | Path, folder: Path | None) -> Path:
+def _find(name_or_path: str | Path, folder: Path | None, where: str = "") -> Path:
     """Return the file behind a card's name or path."""
     text = str(name_or_path)
     if text in card_names():
@@ -361,6 +371,7 @@ def _find(name_or_path: str | Path, folder: Path | None) -> Path:
         return path
     raise CardError(
         f"There is no prior card “{text}”: neither one that comes with the package, nor a file {path}.",
+        where=where,
         mend=nearest(text, card_names()) + " A path is relative to the file that names it.",
     )
 

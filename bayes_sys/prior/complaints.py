@@ -45,6 +45,7 @@ def card_error(
     where: str,
     *,
     overrides: Mapping[str, Any] | None = None,
+    study: str = "",
 ) -> CardError:
     """Return the first thing that is wrong with a card, as one message.
 
@@ -58,17 +59,19 @@ def card_error(
         The card's file.
     overrides : mapping, optional
         The study's own tables; a key that stands there is said to stand in the study.
+    study : str
+        How messages call the study.
     """
     # An unknown key is reported before what its absence under the right name causes.
     found = sorted(problem.errors(), key=lambda e: e["type"] != "extra_forbidden")[0]
     path = tuple(str(part) for part in found["loc"])
-    what, mend = _sentences(found, path, data)
     complaint = found.get("ctx", {}).get("error")
     full = (*path, complaint.key) if isinstance(complaint, Complaint) and complaint.key else path
-    in_study = overrides is not None and bool(full) and _reaches(overrides, full)
+    in_study = overrides is not None and bool(full) and written_in(overrides, full)
+    what, mend = _sentences(found, path, data, ("prior",) if in_study else ())
     table, key = (full[:-1], full[-1]) if _is_leaf(data, full) else (full, "")
     heading = heading_of(("prior", *table) if in_study else table)
-    parts = ["the study" if in_study else where, heading, key]
+    parts = [study if in_study else where, heading, key]
     return CardError(what, where=", ".join(part for part in parts if part), mend=mend)
 
 
@@ -78,14 +81,21 @@ def heading_of(path: tuple[str, ...]) -> str:
     return f"[{'.'.join(bare)}]" if bare else ""
 
 
-def _sentences(found: Any, path: tuple[str, ...], data: Mapping[str, Any]) -> tuple[str, str]:
-    """Return what was found and the mend for one entry of the validator's list."""
+def _sentences(
+    found: Any, path: tuple[str, ...], data: Mapping[str, Any], above: tuple[str, ...]
+) -> tuple[str, str]:
+    """Return what was found and the mend for one entry of the validator's list.
+
+    ``above``: headings that the card's tables stand under, where they are written.
+    """
     kind, value = found["type"], found.get("input")
     error = found.get("ctx", {}).get("error")
     if isinstance(error, Complaint):
         return error.what, error.mend
     if kind == "extra_forbidden":
         hint = nearest(path[-1], _known_keys(path[:-1], data))
+        if isinstance(value, Mapping) and not hint.startswith("Did"):
+            hint = f"{hint} {_right_heading(path, above)}".strip()
         return f"“{path[-1]}” is not a key that belongs here.", hint
     if kind == "missing":
         return _missing(path)
@@ -95,6 +105,17 @@ def _sentences(found: Any, path: tuple[str, ...], data: Mapping[str, Any]) -> tu
         return f"{value} was found, a number {expected} was expected.", "Change the number."
     expected = _EXPECTED.get(kind, found["msg"])
     return f"{value!r} was found, {expected}.", "Change the value."
+
+
+def _right_heading(path: tuple[str, ...], above: tuple[str, ...]) -> str:
+    """Return where a line belongs that stands directly under its table; empty if it does not."""
+    if len(path) != 2 or path[0] not in ("coefficients", "scales"):
+        return ""
+    table, name = path
+    equation = heading_of((*above, table, "in", name))
+    if table == "scales":
+        return f"For the errors of one equation write {equation}."
+    return f"For a regressor write {heading_of((*above, table, 'of', name))}, for an equation {equation}."
 
 
 def _missing(path: tuple[str, ...]) -> tuple[str, str]:
@@ -122,10 +143,12 @@ def _known_keys(path: tuple[str, ...], data: Mapping[str, Any]) -> list[str]:
     return ["family", *keys, *lines]
 
 
-def _reaches(data: Mapping[str, Any], path: tuple[str, ...]) -> bool:
-    """Return whether a path of keys exists in nested mappings."""
+def written_in(data: Mapping[str, Any], path: tuple[str, ...]) -> bool:
+    """Return whether a path of keys exists in nested mappings; ``of."*.heat"`` is ``of.heat``."""
     here: Any = data
-    for part in path:
+    for i, part in enumerate(path):
+        if isinstance(here, Mapping) and i and path[i - 1] == "of" and part not in here:
+            part = f"*.{part}"
         if not isinstance(here, Mapping) or part not in here:
             return False
         here = here[part]

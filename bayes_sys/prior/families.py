@@ -41,6 +41,9 @@ CORRELATION_FAMILIES = {"lkj": Family(("concentration",))}
 AUTOCORRELATION_FAMILIES = {"normal": Family((), (("mean", 0.0), ("scale", 0.5), ("limit", 0.95)))}
 TAIL_FAMILIES = {"gamma": Family((), (("shape", 2.0), ("rate", 0.1)))}
 
+UNBUILT_FAMILIES = frozenset({("coefficients", "student_t")})
+"""(table, family) that a card may write but that no model is built with yet."""
+
 POOLED_ONLY = frozenset({"mean_scale", "spread_scale", "unit"})
 """Keys that mean nothing to a coefficient that is not pooled."""
 

@@ -7,8 +7,13 @@ from dataclasses import dataclass, field
 
 from bayes_sys.errors import CardError, nearest
 from bayes_sys.prior.cards import INTERCEPT, CoefficientLine, PriorCard, ScaleLine
-from bayes_sys.prior.complaints import heading_of
-from bayes_sys.prior.families import COEFFICIENT_FAMILIES, POOLED_ONLY, SCALE_FAMILIES, Family
+from bayes_sys.prior.families import (
+    COEFFICIENT_FAMILIES,
+    POOLED_ONLY,
+    SCALE_FAMILIES,
+    UNBUILT_FAMILIES,
+    Family,
+)
 from bayes_sys.system.system import System
 
 
@@ -89,7 +94,7 @@ def _coefficient(card: PriorCard, equation: str, regressor: str) -> Statement:
         raise CardError(
             f"No line says how “{label}” is distributed: the family “pooled” of [coefficients] speaks of "
             "slopes only.",
-            where=_place(card, ("coefficients",)),
+            where=card.place(("coefficients",)),
             mend="Add [coefficients.of.intercept] with a family and a scale (“pooled” if you mean it).",
         )
     values = _complete(card, "coefficients", family, values, COEFFICIENT_FAMILIES, label)
@@ -140,7 +145,7 @@ def _lay(
         if family and key not in families[family].keys:
             raise CardError(
                 f"“{key}” is not a key of the family “{family}”, which {label} has there.",
-                where=_place(card, path),
+                where=card.place(path, key),
                 mend=f"Give the line a family of its own, use the keys {', '.join(families[family].keys)}, "
                 "or speak of single coefficients.",
             )
@@ -156,7 +161,7 @@ def _complete(
     label: str,
 ) -> dict[str, float]:
     """Fill in what may be left out, and insist on the rest."""
-    where = _place(card, (table,))
+    where = card.place((table,))
     if not family:
         known = ", ".join(f"“{name}”" for name in families)
         raise CardError(f"No line gives {label} a family.", where=where, mend=f"Known families: {known}.")
@@ -166,7 +171,7 @@ def _complete(
             raise CardError(
                 f"No line gives {label} a “{key}”, which the family “{family}” needs.",
                 where=where,
-                mend=f"Add “{key}” to [{table}] or to a more particular line.",
+                mend=f"Add “{key}” to [{table}] or to a more particular line.{_unbuilt(table, family)}",
             )
     for key in values:
         if key not in law.keys:
@@ -176,6 +181,13 @@ def _complete(
                 mend=f"Known keys: {', '.join(law.keys)}.",
             )
     return {**dict(law.optional), **values}
+
+
+def _unbuilt(table: str, family: str) -> str:
+    """Return a warning for a family that can be written but not used yet."""
+    if (table, family) not in UNBUILT_FAMILIES:
+        return ""
+    return f" But “{family}” is not built yet for {table}: use another family."
 
 
 def _check_coefficient_names(card: PriorCard, system: System) -> None:
@@ -189,11 +201,21 @@ def _check_coefficient_names(card: PriorCard, system: System) -> None:
         path = ("coefficients", "of", name)
         if "." in name:
             if name not in system.coefficient_labels:
-                raise _unknown(card, path, f"coefficient “{name}”", nearest(name, system.coefficient_labels))
+                raise _unknown_coefficient(card, path, name, system)
         elif name != INTERCEPT and name not in regressors:
             hint = f"For all of one equation write [coefficients.in.{name}]." if name in system.names else ""
             raise _unknown(card, path, f"regressor “{name}”", hint or nearest(name, regressors))
         _check_point(card, system, name, line)
+
+
+def _unknown_coefficient(card: PriorCard, path: tuple[str, ...], name: str, system: System) -> CardError:
+    """Return the error for a coefficient that is not there, for want of its equation or of its regressor."""
+    equation = name.rpartition(".")[0]
+    own = [f"{e}.{r}" for e, r in system.coefficients if e == equation]
+    if own:
+        return _unknown(card, path, f"coefficient “{name}”", nearest(name, own))
+    what = f"equation “{equation}”, and so no coefficient “{name}”"
+    return _unknown(card, path, what, nearest(equation, system.names))
 
 
 def _check_point(card: PriorCard, system: System, name: str, line: CoefficientLine) -> None:
@@ -218,14 +240,10 @@ def _check_agreement(card: PriorCard, system: System, statements: list[Statement
                 raise CardError(
                     f"The pooled coefficients “{regressor}” must agree in “{key}”: “{elsewhere}” has "
                     f"{values[key]:g}, “{equation}” {statement.values[key]:g}.",
-                    where=_place(card, ("coefficients",)),
+                    where=card.place(("coefficients",)),
                     mend=f"Give “{key}” once, in [coefficients.of.{regressor}]; what may differ is “unit”.",
                 )
 
 
 def _unknown(card: PriorCard, path: tuple[str, ...], what: str, hint: str) -> CardError:
-    return CardError(f"The study has no {what}.", where=_place(card, path), mend=hint)
-
-
-def _place(card: PriorCard, path: tuple[str, ...]) -> str:
-    return f"prior card “{card.name}”, {heading_of(path)}"
+    return CardError(f"The study has no {what}.", where=card.place(path), mend=hint)

@@ -7,6 +7,7 @@ from numpy.typing import NDArray
 
 from bayes_sys.errors import CardError, NotBuiltError
 from bayes_sys.prior.cards import PriorCard
+from bayes_sys.prior.families import UNBUILT_FAMILIES
 from bayes_sys.prior.law import CoefficientLaw, CorrelationLaw, PooledGroup, Prior, ScaleLaw
 from bayes_sys.prior.lines import Statement, coefficient_statements, scale_statements
 from bayes_sys.prior.scaling import EquationUnits, equation_units
@@ -77,10 +78,10 @@ def prior_moments(prior: Prior) -> tuple[Array, Array]:
 
 def _refuse_unbuilt(card: PriorCard, system: System, statements: tuple[Statement, ...]) -> None:
     for label, statement in zip(system.coefficient_labels, statements, strict=True):
-        if statement.family == "student_t":
+        if ("coefficients", statement.family) in UNBUILT_FAMILIES:
             raise NotBuiltError(
-                f"The card gives “{label}” the family “student_t”, which is not built yet for coefficients.",
-                where=f"prior card “{card.name}”, [coefficients]",
+                f"The card gives “{label}” the family “{statement.family}”, which is not built yet for coefficients.",
+                where=card.place(("coefficients",)),
                 mend="Use “normal” or “pooled”.",
             )
 
@@ -91,7 +92,7 @@ def _refuse_intercept_units(card: PriorCard, system: System, statements: tuple[S
             raise CardError(
                 f"The card has scaled = true and gives the pooled “{label}” a unit; scaled intercepts are "
                 "compared on the responses' own scale.",
-                where=f"prior card “{card.name}”, [coefficients]",
+                where=card.place(("coefficients",)),
                 mend="Take the “unit” out, or write the whole card on the raw scale with scaled = false.",
             )
 

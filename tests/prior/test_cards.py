@@ -233,7 +233,12 @@ def test_a_faulty_file_is_named(tmp_path: Path) -> None:
 
 def study(folder: Path, card: str, **overrides: Any) -> Any:
     """Return as much of a study as a card needs."""
-    return SimpleNamespace(folder=folder, prior=SimpleNamespace(card=card, overrides=overrides))
+    return SimpleNamespace(
+        folder=folder,
+        label="bread.toml",
+        at=lambda key: f"bread.toml, {key}",
+        prior=SimpleNamespace(card=card, overrides=overrides),
+    )
 
 
 def test_a_study_without_overrides_uses_the_card_as_it_is(tmp_path: Path) -> None:
@@ -267,14 +272,20 @@ def test_an_override_by_star_meets_the_cards_own_line(tmp_path: Path) -> None:
     [
         (
             {"correlation": {"concentraton": 4.0}},
-            r"the study, \[prior\.correlation\], concentraton: .*“concentration”",
+            r"^bread\.toml, \[prior\.correlation\], concentraton: .*“concentration”",
         ),
         (
             {"correlation": {"concentration": -4.0}},
-            r"the study, \[prior\.correlation\], concentration: -4\.0",
+            r"^bread\.toml, \[prior\.correlation\], concentration: -4\.0",
         ),
-        ({"scales": {"family": "half_norml"}}, r"the study, \[prior\.scales\], family: .*“half_normal”"),
-        ({"scales": {"in": {"a": {"scal": 1.0}}}}, r"the study, \[prior\.scales\.in\.a\], scal: "),
+        ({"scales": {"family": "half_norml"}}, r"^bread\.toml, \[prior\.scales\], family: .*“half_normal”"),
+        ({"scales": {"in": {"a": {"scal": 1.0}}}}, r"^bread\.toml, \[prior\.scales\.in\.a\], scal: "),
+        (
+            {"coefficients": {"income": {"scale": 1.0}}},
+            r"regressor write \[prior\.coefficients\.of\.income\].*\[prior\.coefficients\.in\.income\]",
+        ),
+        ({"scales": {"north": {"scale": 1.0}}}, r"write \[prior\.scales\.in\.north\]"),
+        ({"coefficients": {"off": {"heat": {"scale": 1.0}}}}, r"Did you mean “of”"),
     ],
 )
 def test_a_faulty_override_is_said_to_stand_in_the_study(
@@ -288,3 +299,19 @@ def test_a_fault_of_the_card_is_not_blamed_on_the_study(tmp_path: Path) -> None:
     (tmp_path / "own.toml").write_text(text_with(coefficients='family = "normal"\nscale = 0'))
     with pytest.raises(CardError, match=r"^own\.toml, \[coefficients\], scale"):
         study_card(study(tmp_path, "own.toml", correlation={"concentration": 1.0}))
+
+
+def test_a_card_that_is_not_there_is_blamed_on_the_studys_own_key(tmp_path: Path) -> None:
+    with pytest.raises(CardError, match=r"^bread\.toml, prior\.card: .*“weakly-informative”"):
+        study_card(study(tmp_path, "weakly_informative"))
+
+
+@pytest.mark.parametrize("line", ["heat", "*.heat"])
+def test_a_line_is_placed_in_the_study_where_the_study_wrote_it_and_else_in_the_card(
+    tmp_path: Path, line: str
+) -> None:
+    (tmp_path / "own.toml").write_text(text_with(more="[coefficients.in.a]\nscale = 2.0"))
+    card = study_card(study(tmp_path, "own.toml", coefficients={"of": {line: {"scale": 3.0}}}))
+    assert card.place(("coefficients", "of", "heat")) == "bread.toml, [prior.coefficients.of.heat]"
+    assert card.place(("coefficients", "of", "heat"), "mean") == "prior card “own”, [coefficients.of.heat]"
+    assert card.place(("coefficients", "in", "a")) == "prior card “own”, [coefficients.in.a]"

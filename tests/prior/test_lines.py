@@ -224,6 +224,19 @@ def test_the_point_of_one_intercept_replaces_the_general_one_as_a_whole(system: 
         (
             NORMAL,
             None,
+            '[coefficients.of."oak.log_tariff"]\nscale = 1',
+            ["no equation “oak”", "“alder”, “birch”"],
+        ),
+        (
+            NORMAL,
+            None,
+            '[coefficients.of."aldr.log_tariff"]\nscale = 1',
+            ["no equation “aldr”", "“alder”?"],
+        ),
+        ('family = "student_t"\nscale = 1.0\n', None, "", ["“df”", "not built yet for coefficients"]),
+        (
+            NORMAL,
+            None,
             "[coefficients.of.intercept]\nat = { haet = 1 }",
             ["[coefficients.of.intercept.at]", "“heat”?"],
         ),
