@@ -81,7 +81,8 @@ def test_a_users_own_draws_from_the_model_are_completed() -> None:
 @pytest.mark.slow
 @pytest.mark.parametrize("name", ["base3", "coll2"])
 def test_pymc_engine_matches_further_reference_posteriors(name: str) -> None:
-    check_against(load(name), "pymc", draws=20_000)
+    # two of coll2's regressors correlate at 0.99994: sampled as they stand, their coefficients move slowly
+    check_against(load(name), "pymc", draws=40_000 if name == "coll2" else 20_000)
 
 
 @pytest.mark.parametrize(
