@@ -145,8 +145,12 @@ def _cell_fault(table: RawTable, column: str, row: int, cell: object) -> TableEr
         text = cell.strip()
         if table.options.decimal == "." and re.fullmatch(r"[+-]?\d+,\d+", text):
             mend = 'If the comma is a decimal sign, add csv = { decimal = "," } under [data].'
+            if re.fullmatch(r"[+-]?[1-9]\d{0,2},\d{3}", text):
+                mend += f" If it marks thousands, write {text.replace(',', '')} instead."
         elif table.options.decimal == "," and re.fullmatch(r"[+-]?\d+\.\d+", text):
             mend = 'The study says decimal = ","; if the point is the decimal sign, take that out.'
+            if re.fullmatch(r"[+-]?[1-9]\d{0,2}\.\d{3}", text):
+                mend += f" If it marks thousands, write {text.replace('.', '')} instead."
         elif re.fullmatch(r"[+-]?\d{1,3}([ ,.'’]\d{3})+([.,]\d+)?", text):
             mend = "Write numbers without marks for thousands."
         elif text.lower() in _LIKE_MISSING:

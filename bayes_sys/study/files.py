@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import re
 import warnings
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -12,12 +13,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from bayes_sys.errors import TableError, nearest
+from bayes_sys.study.pandas_periods import with_written_periods
 from bayes_sys.study.spec_data import CsvOptions
 
 if TYPE_CHECKING:
     import pandas as pd
 
 LARGEST_FILE = 2_000_000_000
+_NUMBER = re.compile(r"[+-]?\d+([.,]\d+)?")
 _SEPARATORS = {";": ";", "\t": "\\t", "|": "|", ",": ",", " ": " "}
 
 
@@ -45,12 +48,23 @@ class RawTable:
     """Row numbers in the file, where rows were taken out."""
     lines: tuple[int, ...] = ()
     """Line of each row of a sheet."""
+    sheets: tuple[str, ...] = ()
+    """Names of the sheets of the file."""
 
     def only(self, rows: NDArray[np.int64]) -> RawTable:
         """Return the table with some of its rows."""
         if len(rows) == len(self.frame):
             return self
         return replace(self, frame=self.frame.iloc[rows], kept=rows)
+
+    def about_header(self) -> str:
+        """Return what may be wrong with the header, for messages about a column that is not there."""
+        if self.sheets:
+            names = ", ".join(f"“{n}”" for n in self.sheets)
+            return (
+                f"The names of the columns must stand in the first row of the sheet; the file holds {names}."
+            )
+        return about_names([str(c) for c in self.frame.columns]) if self.path is not None else ""
 
     def row(self, index: int) -> str:
         """Return how to find a row: the number of the data row and the line of the file."""
@@ -78,6 +92,7 @@ def load_table(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
 def _load(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
     suffix = path.suffix.lower()
     lines: tuple[int, ...] = ()
+    sheets: tuple[str, ...] = ()
     if sheet is not None and suffix != ".xlsx":
         raise TableError("“sheet” is for xlsx files only.", where=path.name, mend="Take it out.")
     if suffix == ".csv":
@@ -85,14 +100,14 @@ def _load(path: Path, options: CsvOptions, sheet: str | None) -> RawTable:
     elif suffix == ".parquet":
         frame = _read_parquet(path)
     elif suffix == ".xlsx":
-        frame, lines = _read_xlsx(path, sheet)
+        frame, lines, sheets = _read_xlsx(path, sheet)
     else:
         raise TableError(
             f"files ending in “{path.suffix}” are not read.",
             where=path.name,
             mend="Save it as .csv, .parquet or .xlsx.",
         )
-    return check_table(RawTable(frame, path.name, options, path, lines=lines))
+    return check_table(RawTable(frame, path.name, options, path, lines=lines, sheets=sheets))
 
 
 def given_table(table: pd.DataFrame, options: CsvOptions) -> RawTable:
@@ -107,7 +122,7 @@ def given_table(table: pd.DataFrame, options: CsvOptions) -> RawTable:
     frame = frame.reset_index(drop=True)
     _check_header([str(c) for c in frame.columns], name)
     frame.columns = pd.Index([str(c) for c in frame.columns])
-    return check_table(RawTable(frame, name, options))
+    return check_table(RawTable(with_written_periods(frame), name, options))
 
 
 def check_table(table: RawTable) -> RawTable:
@@ -129,6 +144,10 @@ def _check_file(path: Path) -> None:
         known = [p.name for p in sorted(folder.iterdir())] if folder.is_dir() else []
         known = [n for n in known if n.lower().endswith((".csv", ".parquet", ".xlsx"))]
         mend = nearest(path.name, known) or "The path is relative to the study file."
+        if (folder / "manifest.json").is_file():
+            mend = (
+                "This is the folder of a run, and its study a copy: name the study that lies beside the data."
+            )
         raise TableError("there is no such file.", where=str(path), mend=mend)
     size = path.stat().st_size
     if size == 0:
@@ -141,6 +160,14 @@ def _check_file(path: Path) -> None:
         )
 
 
+def about_names(names: list[str]) -> str:
+    """Return a hint that the header seems to be missing, empty if it does not."""
+    for name in names:
+        if _NUMBER.fullmatch(name.strip()):
+            return f"The first line must hold the names of the columns; “{name}” looks like a value."
+    return ""
+
+
 def _check_header(names: list[str], where: str) -> None:
     seen: set[str] = set()
     for i, name in enumerate(names):
@@ -148,7 +175,7 @@ def _check_header(names: list[str], where: str) -> None:
             raise TableError(
                 f"two columns are called “{name}” (columns {names.index(name) + 1} and {i + 1}).",
                 where=where,
-                mend="Rename one.",
+                mend=f"Rename one. {about_names(names)}".strip(),
             )
         seen.add(name)
 
@@ -276,7 +303,9 @@ def _not_utf8(path: Path) -> TableError:
             except UnicodeDecodeError:
                 break
     return TableError(
-        "the file is not UTF-8 text.", where=f"{path.name}, line {line}", mend="Save it as csv in UTF-8."
+        "the file is not UTF-8 text.",
+        where=f"{path.name}, line {line}",
+        mend="Save it as csv in UTF-8: other encodings are not read.",
     )
 
 
@@ -288,13 +317,17 @@ def _read_parquet(path: Path) -> pd.DataFrame:
         table = parquet.ParquetFile(path).read()
     except (pa.ArrowInvalid, pa.ArrowNotImplementedError, OSError) as error:
         reason = str(error).splitlines()[0]
-        raise TableError(f"the file cannot be read as parquet ({reason}).", where=path.name) from None
+        raise TableError(
+            f"the file cannot be read as parquet ({reason}).",
+            where=path.name,
+            mend="Write it again with another program or version, or save the table as csv in UTF-8.",
+        ) from None
     _check_header(list(table.column_names), path.name)
     frame: pd.DataFrame = table.to_pandas(ignore_metadata=True)
-    return frame
+    return with_written_periods(frame, table.schema)
 
 
-def _read_xlsx(path: Path, sheet: str | None) -> tuple[pd.DataFrame, tuple[int, ...]]:
+def _read_xlsx(path: Path, sheet: str | None) -> tuple[pd.DataFrame, tuple[int, ...], tuple[str, ...]]:
     import pandas as pd
 
     try:
@@ -303,8 +336,13 @@ def _read_xlsx(path: Path, sheet: str | None) -> tuple[pd.DataFrame, tuple[int, 
             book: Any = pd.ExcelFile(path, engine="openpyxl")
     except Exception as error:
         # openpyxl lets through whatever its zip and XML layers raise; to the user it is one fault.
-        raise TableError(f"the file cannot be read as xlsx ({error}).", where=path.name) from None
+        raise TableError(
+            f"the file cannot be read as xlsx ({error}).",
+            where=path.name,
+            mend="Save it again as an .xlsx workbook without a password, or as csv in UTF-8.",
+        ) from None
     with book:
+        sheets = tuple(str(name) for name in book.sheet_names)
         if sheet is not None and sheet not in book.sheet_names:
             raise TableError(
                 f"there is no sheet “{sheet}”.", where=path.name, mend=nearest(sheet, book.sheet_names)
@@ -318,13 +356,16 @@ def _read_xlsx(path: Path, sheet: str | None) -> tuple[pd.DataFrame, tuple[int, 
         )
     cells = cells.astype(object).where(~cells.isin([""]), None)
     if cells.empty:
-        raise TableError("the sheet is empty.", where=path.name, mend="Name another with sheet = “…”.")
+        known = ", ".join(f"“{n}”" for n in sheets)
+        raise TableError(
+            "the sheet is empty.", where=path.name, mend=f"Name one of {known} with sheet = “…” under [data]."
+        )
     names = [_header_text(v, i) for i, v in enumerate(cells.iloc[0])]
     _check_header(names, path.name)
     body = cells.iloc[1:]
     body = body[body.notna().any(axis=1)]
     frame = pd.DataFrame({n: body.iloc[:, i].to_numpy(dtype=object) for i, n in enumerate(names)})
-    return frame, tuple(int(i) + 1 for i in body.index)
+    return frame, tuple(int(i) + 1 for i in body.index), sheets
 
 
 def _header_text(value: object, position: int) -> str:

@@ -97,9 +97,8 @@ def _load(study: Study, table: pd.DataFrame | None) -> RawTable:
 def _need(study: Study, raw: RawTable, column: str, key: str) -> None:
     known = [str(c) for c in raw.frame.columns]
     if column not in known:
-        raise StudyError(
-            f"there is no column “{column}” in {raw.name}.", where=study.at(key), mend=nearest(column, known)
-        )
+        mend = f"{nearest(column, known)} {raw.about_header()}".strip()
+        raise StudyError(f"there is no column “{column}” in {raw.name}.", where=study.at(key), mend=mend)
 
 
 def _long_layout(study: Study, raw: RawTable) -> _Layout:

@@ -225,7 +225,7 @@ def test_the_point_of_one_intercept_replaces_the_general_one_as_a_whole(system: 
             NORMAL,
             None,
             '[coefficients.of."oak.log_tariff"]\nscale = 1',
-            ["no equation “oak”", "“alder”, “birch”"],
+            ["no equation “oak”", "Known: “alder”, “St. John”, “birch”"],
         ),
         (
             NORMAL,

@@ -13,6 +13,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from pyarrow import csv as arrow_csv
+from pyarrow import parquet
 
 from bayes_sys.errors import InputError, StudyError, TableError
 from bayes_sys.study import files
@@ -453,7 +454,7 @@ def test_missing_and_unknown_files_are_refused(tmp_path: Path) -> None:
 @pytest.mark.parametrize("suffix", ["parquet", "xlsx"])
 def test_damaged_files_are_refused(tmp_path: Path, suffix: str) -> None:
     (tmp_path / f"bread.{suffix}").write_bytes(b"no such thing")
-    with pytest.raises(TableError, match=f"cannot be read as {suffix}"):
+    with pytest.raises(TableError, match=f"cannot be read as {suffix}.*csv in UTF-8"):
         read_panel(study_of(tmp_path, data={"file": f"bread.{suffix}"}))
 
 
@@ -527,3 +528,79 @@ def test_a_million_rows_are_read_in_seconds(tmp_path: Path) -> None:
     # About 2 s of processor time where this was written; a reading row by row takes more than a minute.
     assert time.process_time() - start < 20
     np.testing.assert_array_equal(panel.frames["d"]["bread"], table["bread"][3 * n // 10 : 4 * n // 10])
+
+
+@pytest.mark.parametrize("registered", [False, True])
+@pytest.mark.parametrize(
+    ("freq", "first", "kind"), [("M", "2018-02", "month"), ("Q", "2018-Q1", "quarter"), ("Y", "2018", "year")]
+)
+def test_pandas_periods_of_a_parquet_file_stay_periods(
+    tmp_path: Path, registered: bool, freq: str, first: str, kind: str
+) -> None:
+    months = pd.period_range("2018-02", periods=4, freq=freq)
+    table = LONG.assign(year=list(months) * 3)
+    written = pa.Table.from_pandas(table)
+    place = written.schema.get_field_index("year")
+    if not registered:
+        # As another process sees the file before pandas has registered its types.
+        mark = {"ARROW:extension:name": "pandas.period", "ARROW:extension:metadata": f'{{"freq": "{freq}"}}'}
+        plain = pa.field("year", pa.int64(), metadata=mark)
+        written = pa.table(written.columns, names=written.column_names).set_column(
+            place, plain, written.column(place).cast(pa.int64())
+        )
+    parquet.write_table(written, tmp_path / "bread.parquet")
+    panel = read_panel(study_of(tmp_path, data={"file": "bread.parquet"}))
+    assert (panel.periods.kind, panel.periods.labels[0], len(panel.periods)) == (kind, first, 4)
+    same(panel, panel_of(table))
+
+
+def test_pandas_periods_of_a_table_given_in_python_are_periods() -> None:
+    months = pd.period_range("2018-02", periods=4, freq="M")
+    panel = panel_of(LONG.assign(year=list(months) * 3))
+    assert panel.periods.labels == ("2018-02", "2018-03", "2018-04", "2018-05")
+
+
+@pytest.mark.parametrize(
+    ("cell", "decimal", "plain"),
+    [("50,970", ".", "50970"), ("-1,234", ".", "-1234"), ("50.970", ",", "50970")],
+)
+def test_a_mark_that_may_stand_for_thousands_is_not_taken_for_a_decimal_sign_only(
+    tmp_path: Path, cell: str, decimal: str, plain: str
+) -> None:
+    text = f"year;town;bread;price\n2001;a;{cell};2\n"
+    with pytest.raises(TableError, match=f"If it marks thousands, write {plain} instead"):
+        panel_from(tmp_path, text, data={"csv": {"separator": ";", "decimal": decimal}})
+
+
+@pytest.mark.parametrize("cell", ["0,970", "50,97", "50,9701"])
+def test_a_comma_that_cannot_mark_thousands_is_a_decimal_sign(tmp_path: Path, cell: str) -> None:
+    with pytest.raises(TableError) as caught:
+        panel_from(tmp_path, f"year;town;bread;price\n2001;a;{cell};2\n", data={"csv": {"separator": ";"}})
+    assert "decimal sign" in caught.value.mend and "thousands" not in caught.value.mend
+
+
+def test_data_missing_beside_a_run_name_the_copy_and_no_table_of_the_run(tmp_path: Path) -> None:
+    (tmp_path / "manifest.json").write_text("{}")
+    (tmp_path / "scales.csv").write_text("a\n1\n")
+    with pytest.raises(TableError) as caught:
+        read_panel(study_of(tmp_path, data={"file": "sales.csv"}))
+    assert "its study a copy" in caught.value.mend and "scales.csv" not in caught.value.mend
+
+
+def test_a_title_above_the_header_of_a_sheet_is_explained_and_the_other_sheets_named(tmp_path: Path) -> None:
+    with pd.ExcelWriter(tmp_path / "bread.xlsx") as book:
+        LONG.to_excel(book, sheet_name="loaves", startrow=1, index=False)
+        LONG.to_excel(book, sheet_name="rolls", index=False)
+    with pytest.raises(StudyError, match=r"first row of the sheet.*“loaves”, “rolls”"):
+        read_panel(study_of(tmp_path, data={"file": "bread.xlsx"}))
+
+
+@pytest.mark.parametrize("text", ["2001,a,1,2\n2002,a,2,3\n", "2001,a,2,2\n2002,a,2,3\n"])
+def test_a_csv_without_a_header_is_told_from_one_with_another_name(tmp_path: Path, text: str) -> None:
+    with pytest.raises(InputError, match=r"first line must hold the names.*“2001” looks like a value"):
+        panel_from(tmp_path, text)
+
+
+def test_a_file_in_another_encoding_is_to_be_saved_as_utf_8(tmp_path: Path) -> None:
+    with pytest.raises(TableError, match=r"line 2: .*Save it as csv in UTF-8"):
+        panel_from(tmp_path, "year,town,bread,price\n2001,Å,1,2\n".encode("latin-1"))
