@@ -53,6 +53,8 @@ class Panel:
         The recorded steps of every derived column.
     source : str
         Name of the data file or "table given in Python", for messages.
+    shared : mapping of column to str
+        The columns that come from a shared table, with the name of its file.
     """
 
     periods: Periods
@@ -60,6 +62,7 @@ class Panel:
     frames: Mapping[str, pd.DataFrame]
     lineage: Mapping[tuple[str, str], Lineage]
     source: str
+    shared: Mapping[str, str] = field(default_factory=dict)
 
     @property
     def equations(self) -> tuple[str, ...]:

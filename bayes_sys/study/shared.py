@@ -42,6 +42,7 @@ def add_shared_columns(store: Store, periods: Periods) -> None:
                 continue
             _refuse_taken(store, column, i, raw.name)
             store.raw_names.add(column)
+            store.shared[column] = raw.name
             try:
                 values = numbers(raw, column)
             except TableError:

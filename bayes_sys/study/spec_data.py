@@ -25,6 +25,25 @@ COUNT_STEPS = ("lag", "rolling_mean")
 NUMBER_STEPS = ("scale", "center", "power")
 COLUMN_STEPS = ("times", "over", "plus", "minus")
 STEPS = PLAIN_STEPS + COUNT_STEPS + NUMBER_STEPS + COLUMN_STEPS
+ALSO_CALLED = {
+    "ln": '"log"',
+    "loge": '"log"',
+    "difference": '"diff"',
+    "delta": '"diff"',
+    "standardize": '"standardise"',
+    "zscore": '"standardise"',
+    "sqrt": "{ power = 0.5 }",
+    "square": "{ power = 2 }",
+    "inverse": "{ power = -1 }",
+    "shift": "{ lag = 1 }",
+    "moving_average": "{ rolling_mean = 4 }",
+    "demean": "{ center = 10 }",
+    "multiply": '{ times = "other column" }',
+    "divide": '{ over = "other column" }',
+    "add": '{ plus = "other column" }',
+    "subtract": '{ minus = "other column" }',
+}
+"""What steps are called elsewhere (common practice), with how they are written here."""
 INTERCEPT = "intercept"
 
 
@@ -130,14 +149,23 @@ def _plain_step(name: str) -> dict[str, Any]:
     if name in STEPS:
         example = '"other column"' if name in COLUMN_STEPS else "2"
         raise fault(f"the step “{name}” needs a value.", mend=f"Write {{ {name} = {example} }}.")
-    raise fault(f"there is no step “{name}”.", mend=nearest(name, STEPS))
+    raise _unknown_step(name)
+
+
+def _unknown_step(name: str) -> Exception:
+    """Return the fault for a step that is not there: what is meant where that can be told, else all there are."""
+    spelt = name.lower().replace("-", "_")
+    hint = f"Write {ALSO_CALLED[spelt]}." if spelt in ALSO_CALLED else nearest(name, STEPS)
+    if hint.startswith("Known"):
+        hint = f"The steps are {', '.join(STEPS)}."
+    return fault(f"there is no step “{name}”.", mend=hint)
 
 
 def _step_with_argument(name: str, argument: Any) -> dict[str, Any]:
     if name in PLAIN_STEPS:
         raise fault(f"the step “{name}” takes no value.", mend=f'Write "{name}".')
     if name not in STEPS:
-        raise fault(f"there is no step “{name}”.", mend=nearest(name, STEPS))
+        raise _unknown_step(name)
     if name in COLUMN_STEPS:
         if not isinstance(argument, str) or not argument.strip():
             raise fault(f"found {show(argument)}, expected the name of a column.", path=(name,))
@@ -237,6 +265,11 @@ def check_regressor_name(name: str) -> None:
         raise fault(
             f"the regressor's name “{name}” has a dot; names such as “equation.regressor” need the dot.",
             mend=f'Name it, such as {{ name = "{name.replace(".", "_")}", column = "{name}" }}.',
+        )
+    if not name.isprintable():
+        raise fault(
+            f"the regressor's name {name!r} holds a line break, a tab or another sign that cannot be shown.",
+            mend='Give it a name of its own, such as { name = "heat", column = "…" }.',
         )
     if name == INTERCEPT:
         raise fault(

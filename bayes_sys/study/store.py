@@ -56,6 +56,8 @@ class Store:
         Columns whose name was written with ``{equation}``: one series under its own name.
     raw_names : set of str
         Every column of the tables, text columns too.
+    shared : dict of column to str
+        The columns of shared tables, with the name of the file.
     """
 
     study: Study
@@ -66,6 +68,7 @@ class Store:
     columns: dict[str, Cells] = field(default_factory=dict)
     pool: dict[str, Cells] = field(default_factory=dict)
     raw_names: set[str] = field(default_factory=set)
+    shared: dict[str, str] = field(default_factory=dict)
 
     def get(self, pattern: str, key: str) -> Cells:
         """Return the column behind a name, for every equation, shape (n_grid, n_equations).

@@ -67,6 +67,7 @@ def read_panel(study: Study, table: pd.DataFrame | None = None) -> Panel:
     raw = _load(study, table)
     _need(study, raw, study.data.period, "data.period")
     layout = _wide_layout(study, raw) if study.data.is_wide else _long_layout(study, raw)
+    _refuse_control_characters(layout.equations, raw.name)
     plans = [plan_equation(study, e) for e in layout.equations[: layout.n_selected]]
     store = Store(study, raw.name, layout.equations, layout.n_selected, len(layout.periods))
     _fill(store, raw, layout)
@@ -79,7 +80,19 @@ def read_panel(study: Study, table: pd.DataFrame | None = None) -> Panel:
         for column, key in needed:
             if not store.has(column):
                 raise store.missing(column, key)
-    return Panel(layout.periods, in_sample, _frames(store, layout, plans), lineage, raw.name)
+    frames = _frames(store, layout, plans)
+    return Panel(layout.periods, in_sample, frames, lineage, raw.name, store.shared)
+
+
+def _refuse_control_characters(equations: tuple[str, ...], source: str) -> None:
+    """Refuse names that would break every table they stand in."""
+    for name in equations:
+        if not name.isprintable():
+            raise TableError(
+                f"the name {name!r} holds a line break, a tab or another sign that cannot be shown.",
+                where=source,
+                mend="Write the name on one line, in letters, digits and plain signs.",
+            )
 
 
 def _load(study: Study, table: pd.DataFrame | None) -> RawTable:

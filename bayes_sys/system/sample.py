@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -162,23 +162,61 @@ def check_sizes(panel: Panel, plans: Sequence[EquationPlan], keep: Mask) -> None
 
 def check_missing(study: Study, panel: Panel, plans: Sequence[EquationPlan], keep: Mask) -> None:
     """Refuse missing cells, with a list of them and what to write to leave their periods out."""
-    cells = [
-        (int(t), order, plan.name, column)
-        for order, plan in enumerate(plans)
-        for column in columns_of(plan)
-        for t in np.flatnonzero(keep & np.isnan(fetch(panel, plan.name, column)))
-    ]
+    cells = find_missing(panel, plans, keep)
     if not cells:
         return
-    cells.sort(key=lambda cell: cell[:2])
     labels = panel.periods.labels
-    shown = "; ".join(f"{labels[t]}, “{name}”, column “{column}”" for t, _, name, column in cells[:SHOWN])
+    shown = "; ".join(f"{labels[t]}, {whose}, column “{column}”" for t, _, whose, column, _ in cells[:SHOWN])
     more = f"; and {len(cells) - SHOWN} more" if len(cells) > SHOWN else ""
     number = "1 cell is" if len(cells) == 1 else f"{len(cells)} cells are"
+    hints = [mend_missing(study, panel, keep, sorted({t for t, *_ in cells}))]
+    files = {file for *_, file in cells}
+    hints += [hint for hint in (hint_case(panel.equations), hint_formulas(files)) if hint]
     raise DesignError(
         f"{number} missing in the sample, and data with missing cells are not supported yet: {shown}{more}.",
-        where=panel.source,
-        mend=mend_missing(study, panel, keep, sorted({t for t, *_ in cells})),
+        where=", ".join(sorted(files)),
+        mend=" ".join(hints),
+    )
+
+
+def find_missing(
+    panel: Panel, plans: Sequence[EquationPlan], keep: Mask
+) -> list[tuple[int, int, str, str, str]]:
+    """Return (grid position, order, whose, column, file) of every missing cell, by period.
+
+    A cell that comes from a shared table is one cell, whatever number of equations uses it.
+    """
+    cells: dict[tuple[int, str, str], tuple[int, int, str, str, str]] = {}
+    for order, plan in enumerate(plans):
+        for column in columns_of(plan):
+            file = panel.shared.get(full_lineage(panel.lineage, plan.name, column).source or "")
+            for t in np.flatnonzero(keep & np.isnan(fetch(panel, plan.name, column))):
+                whose = f"“{plan.name}”" if file is None else "all equations"
+                key = (int(t), plan.name if file is None else "", column)
+                cells.setdefault(key, (int(t), order, whose, column, file or panel.source))
+    return sorted(cells.values(), key=lambda cell: cell[:2])
+
+
+def hint_case(names: Sequence[str]) -> str:
+    """Return a hint where the names of two units differ in nothing but case or spaces; else empty."""
+    seen: dict[str, str] = {}
+    for name in names:
+        twin = seen.setdefault(" ".join(name.casefold().split()), name)
+        if twin != name:
+            return (
+                f"The units “{twin}” and “{name}” differ only in case or spaces: if they are one, write its "
+                "name in one way."
+            )
+    return ""
+
+
+def hint_formulas(files: Iterable[str]) -> str:
+    """Return a hint where a spreadsheet may hold a formula instead of a value; else empty."""
+    if not any(file.lower().endswith(".xlsx") for file in files):
+        return ""
+    return (
+        "A formula whose value was never saved is read as an empty cell: open the file in a spreadsheet "
+        "program and save it."
     )
 
 
@@ -221,7 +259,7 @@ def write_notes(study: Study, panel: Panel, lost: NDArray[np.int64]) -> tuple[st
     used = np.flatnonzero(panel.in_sample)
     excluded = find_excluded(study, periods)
     gaps = [t for t in range(used[0], used[-1]) if not panel.in_sample[t] and t not in excluded]
-    notes = []
+    notes = note_bounds(study, periods, [*used.tolist(), *excluded])
     if periods.step > 1:
         unit = {"integer": "units", "week": "days"}.get(periods.kind, f"{periods.kind}s")
         notes.append(f"Periods are {periods.step} {unit} apart: a lag of one period reaches that far back.")
@@ -239,6 +277,21 @@ def write_notes(study: Study, panel: Panel, lost: NDArray[np.int64]) -> tuple[st
             "a lag, difference or moving average has no value there yet."
         )
     return tuple(notes)
+
+
+def note_bounds(study: Study, periods: Periods, spoken: Sequence[int]) -> list[str]:
+    """Return notes on a from or to beyond the data, which leaves nothing out and may be a slip.
+
+    ``spoken``: grid positions of the periods in the sample, and of those the study leaves out.
+    """
+    notes = []
+    low, high = study.data.from_, study.data.to
+    first, last = min(spoken), max(spoken)
+    if low is not None and periods.first_ordinal(low) < periods.ordinals[first]:
+        notes.append(f"The study says from = {low}; the first period with data is {periods.labels[first]}.")
+    if high is not None and periods.last_ordinal(high) > periods.ordinals[last]:
+        notes.append(f"The study says to = {high}; the last period with data is {periods.labels[last]}.")
+    return notes
 
 
 def list_periods(periods: Periods, positions: Sequence[int] | NDArray[np.int64]) -> str:

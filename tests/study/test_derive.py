@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import tomllib
 from typing import Any
 
 import numpy as np
@@ -15,6 +16,7 @@ from bayes_sys.study.derive import derive_columns, full_lineage
 from bayes_sys.study.panel import AppliedStep, Panel
 from bayes_sys.study.periods import find_periods
 from bayes_sys.study.read import make_study
+from bayes_sys.study.spec_data import ALSO_CALLED, STEPS
 from bayes_sys.study.store import Cells, Store
 from bayes_sys.study.table import read_panel
 
@@ -370,3 +372,29 @@ def test_the_name_of_a_season_is_no_column_and_its_columns_are_named() -> None:
     )
     with pytest.raises(StudyError, match=r"“phase_2”, “phase_3”"):
         read_panel(study, MILLS)
+
+
+@pytest.mark.parametrize(
+    ("step", "said"),
+    [
+        ("ln", 'Write "log"'),
+        ({"ln": 1}, 'Write "log"'),
+        ("sqrt", "power = 0.5"),
+        ("standardize", 'Write "standardise"'),
+        ("difference", 'Write "diff"'),
+        ("lgo", "“log”"),
+        ("seasonally_adjusted", ", ".join(STEPS)),
+    ],
+)
+def test_a_step_called_otherwise_is_answered_with_the_step_that_is_meant_or_with_all_of_them(
+    step: Any, said: str
+) -> None:
+    with pytest.raises(StudyError) as caught:
+        make_study({"data": {"period": "year"}, "derive": {"x": {"from": "y", "steps": [step]}}})
+    assert said in caught.value.mend and "…" not in caught.value.mend
+
+
+@pytest.mark.parametrize("written", ALSO_CALLED.values())
+def test_every_step_that_is_offered_instead_can_be_written(written: str) -> None:
+    step = tomllib.loads(f"step = {written}")["step"]
+    make_study({"data": {"period": "year"}, "derive": {"x": {"from": "y", "steps": [step]}}})

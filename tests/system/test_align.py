@@ -466,3 +466,61 @@ def test_columns_at_both_ends_of_the_range_are_still_built() -> None:
     table["heat"] *= 1e-69
     content = long_study(every_equation={"response": "demand", "regressors": ["tariff", "heat"]})
     assert np.isfinite(build(content, table).factor.triangle).all()
+
+
+def test_a_window_beyond_the_data_is_noted_and_one_within_is_not() -> None:
+    beyond = build(long_study(data={"from": 1900, "to": 2100}), long_table()).notes
+    assert [("from = 1900" in n and "2001" in n) or ("to = 2100" in n and "2010" in n) for n in beyond] == [
+        True
+    ] * 2
+    assert build(long_study(data={"from": 2001, "to": 2010}), long_table()).notes == ()
+    (left_out,) = build(long_study(data={"from": 2001, "exclude": [2001]}), long_table()).notes
+    assert "Left out as the study asks" in left_out
+
+
+def test_units_that_differ_in_case_are_suspected_where_their_cells_are_missing() -> None:
+    table = long_table(units=("North", "south"))
+    table.loc[(table["unit"] == "North") & (table["year"] > 2005), "unit"] = "north"
+    assert "“North” and “north” differ only in case" in refusal(long_study(), table)
+    assert "differ only" not in refusal(long_study(), long_table().drop(index=3))
+
+
+def with_national(tmp_path: Path, table: pd.DataFrame, years: Any) -> str:
+    """Return the refusal of a study with a shared table of those years, used raw and in logarithms."""
+    rate = np.exp(np.random.default_rng(2).standard_normal(len(years)))
+    pd.DataFrame({"year": list(years), "rate": rate}).to_csv(tmp_path / "national.csv", index=False)
+    content = long_study(
+        data={"shared": [{"file": "national.csv", "period": "year"}]},
+        derive={"log_rate": {"from": "rate", "steps": ["log"]}},
+        every_equation={"regressors": ["heat", "log_rate"]},
+    )
+    with pytest.raises(DesignError) as caught:
+        build_system(
+            make_study(
+                {**content, "derive": {**long_study()["derive"], **content["derive"]}}, folder=tmp_path
+            ),
+            table,
+        )
+    return str(caught.value)
+
+
+def test_a_shared_table_that_ends_too_early_is_named_and_each_cell_counted_once(tmp_path: Path) -> None:
+    text = with_national(tmp_path, long_table(), range(2001, 2009))
+    assert text.startswith("national.csv: 2 cells are missing")
+    assert "2009, all equations, column “log_rate”" in text and "to = 2008" in text
+
+
+def test_empty_cells_of_a_sheet_hint_at_formulas_without_a_saved_value(tmp_path: Path) -> None:
+    table = long_table().astype({"heat": object})
+    table.loc[3, "heat"] = "=1+1"
+    table.to_excel(tmp_path / "water.xlsx", index=False)
+    study = make_study(long_study(data={"file": "water.xlsx"}), folder=tmp_path)
+    with pytest.raises(DesignError, match=r"1 cell is missing.*formula whose value was never saved"):
+        build_system(study)
+
+
+@pytest.mark.parametrize("name", ["north\nwest", "north\twest", "\x1b[31mnorth"])
+def test_names_that_would_break_a_table_are_refused(name: str) -> None:
+    assert "cannot be shown" in refusal(long_study(), long_table(units=("alder", name)))
+    regressors = [{"name": name, "column": "heat"}]
+    assert "cannot be shown" in refusal(long_study(every_equation={"regressors": regressors}), long_table())
