@@ -59,22 +59,27 @@ def score(w: Array, xe: Array, equation: Array, out: Array) -> None:
 
 
 @kernel
-def residual_square(shift: Array, xx: Array, xe: Array, ee: Array, equation: Array, out: Array) -> None:
-    """Write the residual cross-product at coefficients ``shift`` away from the reference, shape (n, n)."""
+def residual_moments(
+    shift: Array, xx: Array, xe: Array, ee: Array, equation: Array, moved: Array, square: Array
+) -> None:
+    """Write ``x_a' e_j`` and the residual cross-product at coefficients ``shift`` away from the reference.
+
+    ``moved`` has shape (K, n), ``square`` (n, n).
+    """
     n, k = ee.shape[0], xx.shape[0]
+    for a in range(k):
+        for j in range(n):
+            moved[a, j] = xe[a, j]
+        for b in range(k):
+            moved[a, int(equation[b])] -= xx[a, b] * shift[b]
     for i in range(n):
         for j in range(n):
-            out[i, j] = ee[i, j]
+            square[i, j] = ee[i, j]
     for a in range(k):
         i = int(equation[a])
         for j in range(n):
-            out[j, i] -= xe[a, j] * shift[a]
-    for a in range(k):
-        i = int(equation[a])
-        for j in range(n):
-            out[i, j] -= shift[a] * xe[a, j]
-        for b in range(k):
-            out[i, int(equation[b])] += shift[a] * xx[a, b] * shift[b]
+            square[j, i] -= xe[a, j] * shift[a]
+            square[i, j] -= shift[a] * moved[a, j]
 
 
 @kernel
@@ -95,21 +100,8 @@ def known(
     square : array of float, shape (n, n), written
         The residual cross-product, which carries the derivative in Sigma^-1.
     """
-    n, k = ee.shape[0], xx.shape[0]
-    moved = np.empty((k, n))  # x_a' e_j at these coefficients
-    for a in range(k):
-        for j in range(n):
-            moved[a, j] = xe[a, j]
-        for b in range(k):
-            moved[a, int(equation[b])] -= xx[a, b] * shift[b]
-    for i in range(n):
-        for j in range(n):
-            square[i, j] = ee[i, j]
-    for a in range(k):
-        i = int(equation[a])
-        for j in range(n):
-            square[j, i] -= xe[a, j] * shift[a]
-            square[i, j] -= shift[a] * moved[a, j]
+    moved = np.empty(xe.shape)
+    residual_moments(shift, xx, xe, ee, equation, moved, square)
     score(w, moved, equation, by_shift)
     return -0.5 * trace_whitened(w, square)
 
@@ -243,7 +235,7 @@ def collapsed(
     columns(theta, scale, members, groups, shift)
     for i in range(k):
         shift[i] += centre[i]
-    residual_square(shift, xx, xe, ee, equation, square)
+    residual_moments(shift, xx, xe, ee, equation, np.empty(xe.shape), square)
     value -= 0.5 * trace_whitened(w, square)
     add_uncertainty(a, scale, members, groups, xx, equation, square)
     return value
